@@ -1,0 +1,1 @@
+"""What the programme does with the estimates."""
