@@ -54,7 +54,7 @@ class Finding:
 
 
 def findings_frame(findings: Sequence[Finding]) -> pd.DataFrame:
-    """Findings as a table.
+    """Return findings as a table.
 
     Parameters
     ----------
