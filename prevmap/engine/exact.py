@@ -1,0 +1,256 @@
+"""Dense engine without a mesh: the reference the mesh is held against.
+
+The linear predictor at the rows is ``eta ~ N(X mu, S)``, ``S = K + X V X'`` with the Matern covariance ``K``
+and the coefficient prior ``N(mu, V)``. Laplace approximation and gradient follow Rasmussen & Williams (2006),
+algorithms 3.1 and 5.1, written with ``I + S W`` so that a curvature ``W`` with blocks and without a square
+root (imperfect tests) is allowed.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Iterator
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import cholesky, lu_factor, lu_solve
+from scipy.spatial.distance import cdist
+
+from prevmap.engine.laplace import Theta, clamp_blocks
+from prevmap.engine.likelihood import Observations, evaluate, higher_terms
+from prevmap.engine.matern import correlation, correlation_range_derivative
+from prevmap.errors import FitError
+
+_DECREMENT = 1e-10
+_MAX_STEPS = 100
+_JITTER = 1e-10  # relative to the largest variance, for joint draws at points that (nearly) coincide
+_LARGEST_JOINT = 6_000  # points whose dense joint covariance still fits in 300 MB
+
+
+@dataclass(frozen=True, slots=True)
+class DenseRows:
+    """Places to predict at: positions (n, 2) in km and covariates (n, p)."""
+
+    xy_km: NDArray[np.float64]
+    design: NDArray[np.float64]
+
+    def __len__(self) -> int:
+        return int(self.design.shape[0])
+
+
+@dataclass(frozen=True, slots=True)
+class DenseState:
+    """The Laplace approximation at one value of the hyperparameters.
+
+    Attributes
+    ----------
+    theta : Theta
+    mode : (n_rows,) float
+        Weights ``a`` with ``eta* = X mu + S a``.
+    log_evidence : float
+    gradient : (3,) float
+    mean_shift : (n_rows,) float
+        What to add to ``mode`` for the first-order corrected posterior mean.
+    curvature : (sum of squared block sizes,) float
+    iterations : int
+    smallest_pivot : float
+        Smallest pivot of ``I + S W``.
+    """
+
+    theta: Theta
+    mode: NDArray[np.float64]
+    log_evidence: float
+    gradient: NDArray[np.float64]
+    mean_shift: NDArray[np.float64]
+    curvature: NDArray[np.float64]
+    iterations: int
+    smallest_pivot: float
+
+
+class DenseModel:
+    """A survey under the dense engine; what does not change with the hyperparameters.
+
+    Parameters
+    ----------
+    data : Observations
+    xy_km : (n_rows, 2) float
+    design : (n_rows, p) float
+    coefficient_mean, coefficient_sd : (p,) float
+    nu : {0.5, 1.0, 1.5, 2.5}
+    """
+
+    def __init__(
+        self,
+        data: Observations,
+        xy_km: NDArray[np.float64],
+        design: NDArray[np.float64],
+        coefficient_mean: NDArray[np.float64],
+        coefficient_sd: NDArray[np.float64],
+        nu: float = 1.0,
+    ) -> None:
+        self.data = data
+        self.xy_km = xy_km
+        self.design = design
+        self.nu = nu
+        self.coefficient_mean = np.asarray(coefficient_mean, dtype=float)
+        self.coefficient_variance = np.asarray(coefficient_sd, dtype=float) ** 2
+        self._distance = cdist(xy_km, xy_km)
+        self._linear = (design * self.coefficient_variance) @ design.T
+        self._offset = design @ self.coefficient_mean
+
+    def _blocks(self, curvature: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Dense block-diagonal matrix of the curvature blocks."""
+        start, block = self.data.site_start, self.data.block_start
+        out = np.zeros(self._distance.shape)
+        for s in range(start.size - 1):
+            a, b = start[s], start[s + 1]
+            out[a:b, a:b] = curvature[block[s] : block[s + 1]].reshape(b - a, b - a)
+        return out
+
+    def _gather(self, covariance: NDArray[np.float64]) -> NDArray[np.float64]:
+        start = self.data.site_start
+        pairs = zip(start[:-1], start[1:], strict=True)
+        return np.concatenate([covariance[a:b, a:b].ravel() for a, b in pairs])
+
+    def _field(self, theta: Theta) -> NDArray[np.float64]:
+        return theta.sd**2 * correlation(self._distance, theta.range_km, self.nu)
+
+    def _mode(
+        self, theta: Theta, S: NDArray[np.float64], start: NDArray[np.float64] | None
+    ) -> tuple[NDArray[np.float64], int]:
+        a = np.zeros(self._offset.size) if start is None else start.copy()
+        identity = np.eye(a.size)
+
+        def objective(v: NDArray[np.float64]) -> float:
+            Sv = S @ v
+            return evaluate(self.data, self._offset + Sv, theta.nugget_sd).value - 0.5 * float(v @ Sv)
+
+        value = objective(a)
+        trace: list[float] = []
+        for step_number in range(1, _MAX_STEPS + 1):
+            f = S @ a
+            terms = evaluate(self.data, self._offset + f, theta.nugget_sd)
+            W = self._blocks(clamp_blocks(terms.curvature, self.data))
+            b = W @ f + terms.gradient
+            target = b - W @ lu_solve(lu_factor(identity + S @ W), S @ b)
+            step = target - a
+            decrement = float((terms.gradient - a) @ (S @ step))
+            trace.append(decrement)
+            if not np.isfinite(decrement):
+                break
+            if decrement < _DECREMENT:
+                return target, step_number
+            length = 1.0
+            for _ in range(30):
+                trial = objective(a + length * step)
+                if trial >= value + 1e-4 * length * decrement - 1e-11 * abs(value):
+                    break
+                length *= 0.5
+            a = a + length * step
+            value = trial
+        shown = ", ".join(f"{d:.3g}" for d in trace[-6:])
+        raise FitError(
+            f"Newton's method did not converge in {len(trace)} steps at range {theta.range_km:.4g} km, sd "
+            f"{theta.sd:.4g}, nugget sd {theta.nugget_sd:.4g}; last decrements {shown}"
+        )
+
+    def laplace(self, theta: Theta, start: NDArray[np.float64] | None = None) -> DenseState:
+        """Mode, log-evidence and exact gradient at ``theta``.
+
+        Raises
+        ------
+        FitError
+            Where Newton's method fails or the posterior is not peaked at the point it found.
+        """
+        K = self._field(theta)
+        S = K + self._linear
+        a, steps = self._mode(theta, S, start)
+        f = S @ a
+        eta = self._offset + f
+        terms = evaluate(self.data, eta, theta.nugget_sd)
+        W = self._blocks(terms.curvature)
+        lu = lu_factor(np.eye(a.size) + S @ W)
+        pivots = np.diag(lu[0])
+        swaps = int(np.sum(lu[1] != np.arange(a.size)))
+        if np.any(pivots == 0) or np.prod(np.sign(pivots)) * (-1.0) ** swaps <= 0:
+            raise FitError("the posterior is not peaked at the mode: its Hessian is not positive definite")
+        covariance = lu_solve(lu, S)
+        log_evidence = terms.value - 0.5 * float(a @ f) - 0.5 * float(np.sum(np.log(np.abs(pivots))))
+
+        higher = higher_terms(self.data, eta, theta.nugget_sd, self._gather(covariance))
+        shift = 0.5 * lu_solve(lu, higher.third, trans=1)  # (I + S W)' = I + W S
+        R = lu_solve(lu, W.T, trans=1).T  # W (I + S W)^-1
+        d_range = theta.sd**2 * correlation_range_derivative(self._distance, theta.range_km, self.nu)
+        gradient = np.zeros(3)
+        for at, dS in ((0, d_range), (1, 2.0 * K)):
+            gradient[at] = 0.5 * float(a @ dS @ a) - 0.5 * float(np.sum(R * dS.T)) + float(shift @ (dS @ a))
+        if np.isfinite(theta.log_nugget):
+            gradient[2] = (
+                higher.nugget_value + 0.5 * higher.nugget_hessian + float(shift @ (S @ higher.nugget_gradient))
+            )
+        return DenseState(
+            theta, a, log_evidence, gradient, shift, terms.curvature, steps, float(np.min(np.abs(pivots)))
+        )
+
+    def locate(self, xy_km: NDArray[np.float64], design: NDArray[np.float64]) -> DenseRows:
+        """Places to predict at; every place is possible without a mesh."""
+        return DenseRows(np.asarray(xy_km, dtype=float), np.asarray(design, dtype=float))
+
+    def on_mesh(self, xy_km: NDArray[np.float64]) -> NDArray[np.bool_]:
+        """(n,) bool: all true, since this engine has no mesh to leave."""
+        return np.ones(len(xy_km), dtype=bool)
+
+    def _cross(self, theta: Theta, rows: DenseRows) -> NDArray[np.float64]:
+        K = theta.sd**2 * correlation(cdist(rows.xy_km, self.xy_km), theta.range_km, self.nu)
+        return K + (rows.design * self.coefficient_variance) @ self.design.T
+
+    def _reduction(self, state: DenseState) -> NDArray[np.float64]:
+        S = self._field(state.theta) + self._linear
+        W = self._blocks(state.curvature)
+        return lu_solve(lu_factor(np.eye(S.shape[0]) + S @ W), W.T, trans=1).T
+
+    def moments(self, state: DenseState, rows: DenseRows) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Mean and variance of the linear predictor (n,) at each row."""
+        cross = self._cross(state.theta, rows)
+        mean = rows.design @ self.coefficient_mean + cross @ (state.mode + state.mean_shift)
+        prior = state.theta.sd**2 + (rows.design**2) @ self.coefficient_variance
+        variance = prior - np.einsum("ij,ij->i", cross @ self._reduction(state), cross)
+        return mean, np.maximum(variance, 0.0)
+
+    def coefficients(self, state: DenseState) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Mean (p,) and covariance (p, p) of the coefficients."""
+        VX = self.coefficient_variance[:, None] * self.design.T
+        mean = self.coefficient_mean + VX @ (state.mode + state.mean_shift)
+        return mean, np.diag(self.coefficient_variance) - VX @ self._reduction(state) @ VX.T
+
+    def draws(
+        self, state: DenseState, windows: Iterable[DenseRows], rng: np.random.Generator, count: int
+    ) -> Iterator[NDArray[np.float64]]:
+        """Joint draws of the linear predictor, one array (n_window, count) per window of rows.
+
+        Raises
+        ------
+        FitError
+            Above 6,000 rows: use the mesh engine for joint draws there.
+        """
+        parts = list(windows)
+        xy = np.concatenate([r.xy_km for r in parts])
+        design = np.concatenate([r.design for r in parts])
+        if len(xy) > _LARGEST_JOINT:
+            raise FitError(
+                f"joint draws at {len(xy):,} points need a dense matrix of that order; the exact engine allows "
+                f"{_LARGEST_JOINT:,}. Use engine='mesh' or a coarser grid"
+            )
+        rows = DenseRows(xy, design)
+        mean, _ = self.moments(state, rows)
+        cross = self._cross(state.theta, rows)
+        prior = state.theta.sd**2 * correlation(cdist(xy, xy), state.theta.range_km, self.nu)
+        prior += (design * self.coefficient_variance) @ design.T
+        covariance = prior - cross @ self._reduction(state) @ cross.T
+        covariance = 0.5 * (covariance + covariance.T)
+        covariance[np.diag_indices_from(covariance)] += _JITTER * float(np.max(np.diag(prior)))
+        joint = mean[:, None] + cholesky(covariance, lower=True) @ rng.standard_normal((len(xy), count))
+        start = 0
+        for part in parts:
+            yield joint[start : start + len(part)]
+            start += len(part)

@@ -1,0 +1,355 @@
+"""Hyperparameters: their mode, their integration, and the mixture that all predictions use.
+
+The log posterior of ``theta`` = (log range, log sd, log nugget) is the Laplace log-evidence plus the log prior
+density *in theta*. Its mode is found by a quasi-Newton method with the exact gradient. Integration follows
+Rue, Martino & Chopin (2009, JRSS-B 71:319-392, sections 3.1 and 6.5): an even lattice in the eigenbasis of the
+curvature at the mode, grown outward while the density has not fallen off, so that slow tails get points.
+"""
+
+from __future__ import annotations
+
+import itertools
+import logging
+from collections.abc import Callable, Iterable, Iterator
+from dataclasses import dataclass
+from typing import Any, Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.interpolate import RBFInterpolator
+from scipy.optimize import minimize
+
+from prevmap.engine.laplace import Theta
+from prevmap.errors import FitError
+
+log = logging.getLogger("prevmap")
+
+_STEP = 1.5  # lattice step in posterior standard deviations: trapezoid error about 2 exp(-2 pi^2/step^2) = 3e-4
+_DROP = 3.5  # a lattice point this far below the mode (log scale) has no neighbours added
+_MOST_POINTS = 150
+_DIFFERENCE = 0.02  # step in theta for the curvature from exact gradients
+_GRADIENT = 1e-3
+
+
+class State(Protocol):
+    """What an engine returns at one ``theta``."""
+
+    @property
+    def theta(self) -> Theta: ...  # noqa: D102
+    @property
+    def mode(self) -> NDArray[np.float64]: ...  # noqa: D102
+    @property
+    def log_evidence(self) -> float: ...  # noqa: D102
+    @property
+    def gradient(self) -> NDArray[np.float64]: ...  # noqa: D102
+    @property
+    def iterations(self) -> int: ...  # noqa: D102
+    @property
+    def smallest_pivot(self) -> float: ...  # noqa: D102
+
+
+class Engine(Protocol):
+    """The mesh engine and the dense engine, as the outer problem sees them."""
+
+    def laplace(self, theta: Theta, start: NDArray[np.float64] | None = None) -> Any:
+        """State at ``theta``, Newton's method started at ``start``."""
+
+    def locate(self, xy_km: NDArray[np.float64], design: NDArray[np.float64]) -> Any:
+        """Rows to predict at."""
+
+    def on_mesh(self, xy_km: NDArray[np.float64]) -> NDArray[np.bool_]:
+        """Which positions can be predicted."""
+
+    def moments(self, state: Any, rows: Any) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Mean and variance of the linear predictor."""
+
+    def coefficients(self, state: Any) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Mean and covariance of the coefficients."""
+
+    def draws(
+        self, state: Any, windows: Iterable[Any], rng: np.random.Generator, count: int
+    ) -> Iterator[NDArray[np.float64]]:
+        """Joint draws of the linear predictor, window by window."""
+
+
+LogPrior = Callable[[float], tuple[float, float]]
+
+
+@dataclass(frozen=True, slots=True)
+class Outer:
+    """The outer problem: which hyperparameters are free, their priors, and where the others stand.
+
+    Attributes
+    ----------
+    start : (3,) float
+        theta to start from; entries that are not free are fixed there (minus infinity: no nugget).
+    free : (3,) bool
+    priors : three functions or None
+        log density in theta and its derivative, for each free entry.
+    lower, upper : (3,) float
+        Bounds that keep the search where the numbers make sense.
+    """
+
+    start: NDArray[np.float64]
+    free: NDArray[np.bool_]
+    priors: tuple[LogPrior | None, LogPrior | None, LogPrior | None]
+    lower: NDArray[np.float64]
+    upper: NDArray[np.float64]
+
+    def theta(self, free_values: NDArray[np.float64]) -> Theta:
+        """Whole theta with the free entries replaced."""
+        full = self.start.copy()
+        full[self.free] = free_values
+        return Theta(*(float(v) for v in full))
+
+    def log_prior(self, free_values: NDArray[np.float64]) -> tuple[float, NDArray[np.float64]]:
+        """Log prior density in theta of the free entries, and its gradient."""
+        value, gradient = 0.0, np.zeros(free_values.size)
+        for at, j in enumerate(np.flatnonzero(self.free)):
+            prior = self.priors[j]
+            if prior is not None:
+                v, g = prior(float(free_values[at]))
+                value += v
+                gradient[at] = g
+        return value, gradient
+
+
+@dataclass(frozen=True, slots=True)
+class Posterior:
+    """Hyperparameters integrated: a weighted set of Laplace approximations.
+
+    Attributes
+    ----------
+    states : tuple of State
+        One per integration point, the mode first.
+    weights : (n_points,) float, sums to 1
+    log_evidence : float
+        Laplace log p(y), integrated over the free hyperparameters with their prior.
+    mode : State
+    marginals : {index in theta: (values, weights)}
+        Fine discrete marginal of each free entry of theta.
+    evaluations : int
+    gradient_norm : float
+        Norm of the gradient of the log posterior at the mode.
+    warnings : tuple of str
+    """
+
+    states: tuple[Any, ...]
+    weights: NDArray[np.float64]
+    log_evidence: float
+    mode: Any
+    marginals: dict[int, tuple[NDArray[np.float64], NDArray[np.float64]]]
+    evaluations: int
+    gradient_norm: float
+    warnings: tuple[str, ...]
+
+
+def infer(
+    engine: Engine,
+    outer: Outer,
+    *,
+    integrate: bool = True,
+    start: NDArray[np.float64] | None = None,
+    tick: Callable[[str], None] | None = None,
+) -> Posterior:
+    """Find the mode of the hyperparameters and integrate over them.
+
+    Parameters
+    ----------
+    engine : Engine
+    outer : Outer
+    integrate : bool
+        False keeps the mode alone; the log-evidence then uses a Gaussian around it.
+    start : (n_latent,) float, optional
+        Latent vector to start the first Newton iteration from.
+    tick : callable, optional
+        Called with the name of the stage after every evaluation; may raise to interrupt.
+
+    Raises
+    ------
+    FitError
+        Where the inner problem fails at the starting point or no mode is found.
+    """
+    search = _Search(engine, outer, start, tick)
+    if not np.any(outer.free):
+        state = search.evaluate(np.zeros(0), "mode")[2]
+        return Posterior((state,), np.ones(1), state.log_evidence, state, {}, 1, 0.0, ())
+    mode = search.find_mode()
+    value, gradient, best = search.evaluate(mode, "curvature")
+    precision = search.curvature(mode)
+    eigenvalues, vectors = np.linalg.eigh(precision)
+    warnings: list[str] = list(search.warnings)
+    if np.any(eigenvalues < 0.05):
+        # A flat direction: its scale is capped so that the lattice stays where the priors mean something.
+        warnings.append(
+            "the posterior of the hyperparameters is nearly flat in one direction: the data say little about it"
+        )
+        eigenvalues = np.maximum(eigenvalues, 0.05)
+    basis = vectors / np.sqrt(eigenvalues)
+    free = int(np.sum(outer.free))
+    norm = float(np.sqrt(gradient @ (basis @ basis.T) @ gradient))
+    log_volume = -0.5 * float(np.sum(np.log(eigenvalues)))
+    if not integrate:
+        evidence = value + 0.5 * free * np.log(2.0 * np.pi) + log_volume
+        z = np.linspace(-4.0, 4.0, 401)
+        sd = np.sqrt(np.diag(basis @ basis.T))
+        density = np.exp(-0.5 * z**2) / np.sum(np.exp(-0.5 * z**2))
+        marginals = {
+            int(j): (mode[at] + sd[at] * z, density) for at, j in enumerate(np.flatnonzero(outer.free))
+        }
+        return Posterior(
+            (best,), np.ones(1), evidence, best, marginals, search.count, norm, tuple(warnings)
+        )
+    points, values, states = search.lattice(mode, basis, value, best)
+    if len(states) >= _MOST_POINTS:
+        warnings.append(
+            f"integration over the hyperparameters stopped at {_MOST_POINTS} points with tails still open"
+        )
+    top = float(np.max(values))
+    mass = np.exp(values - top)
+    evidence = top + np.log(np.sum(mass)) + free * np.log(_STEP) + log_volume
+    marginals = _marginals(points, values, mode, basis, np.flatnonzero(outer.free))
+    for warning in warnings:
+        log.warning(warning)
+    return Posterior(
+        tuple(states), mass / np.sum(mass), evidence, best, marginals, search.count, norm, tuple(warnings)
+    )
+
+
+class _Search:
+    """Evaluations of the log posterior with warm starts, counted."""
+
+    def __init__(
+        self,
+        engine: Engine,
+        outer: Outer,
+        start: NDArray[np.float64] | None,
+        tick: Callable[[str], None] | None,
+    ) -> None:
+        self.engine, self.outer, self.tick = engine, outer, tick
+        self.latest = start
+        self.count = 0
+        self.warnings: list[str] = []
+
+    def evaluate(
+        self, free_values: NDArray[np.float64], stage: str, start: NDArray[np.float64] | None = None
+    ) -> tuple[float, NDArray[np.float64], Any]:
+        """Log posterior, its gradient in the free entries, and the state."""
+        state = self.engine.laplace(
+            self.outer.theta(free_values), self.latest if start is None else start
+        )
+        self.count += 1
+        if start is None:
+            self.latest = state.mode
+        if self.tick is not None:
+            self.tick(stage)
+        prior, slope = self.outer.log_prior(free_values)
+        return state.log_evidence + prior, state.gradient[self.outer.free] + slope, state
+
+    def find_mode(self) -> NDArray[np.float64]:
+        """Free entries at the mode of the log posterior."""
+        outer = self.outer
+
+        def objective(v: NDArray[np.float64]) -> tuple[float, NDArray[np.float64]]:
+            value, gradient, _ = self.evaluate(v, "mode")
+            return -value, -gradient
+
+        bounds = list(zip(outer.lower[outer.free], outer.upper[outer.free], strict=True))
+        result = minimize(
+            objective, outer.start[outer.free], jac=True, method="L-BFGS-B", bounds=bounds,
+            options={"gtol": _GRADIENT, "ftol": 1e-11, "maxiter": 60, "maxls": 30},
+        )  # fmt: skip
+        x = np.asarray(result.x, dtype=float)
+        if not np.isfinite(result.fun):
+            raise FitError(f"no mode of the hyperparameters was found: {result.message}")
+        if not result.success and float(np.max(np.abs(result.jac))) > 0.05:
+            raise FitError(
+                f"the search for the mode of the hyperparameters stopped after {self.count} evaluations with "
+                f"gradient {float(np.max(np.abs(result.jac))):.3g}: {result.message}. Give tighter priors"
+            )
+        names = np.array(["range_km", "sd", "nugget_sd"])[outer.free]
+        for name, v, (lo, hi) in zip(names, x, bounds, strict=True):
+            if v <= lo + 1e-6 or v >= hi - 1e-6:
+                self.warnings.append(
+                    f"{name} came to rest at the end of what was searched ({np.exp(v):.3g}): check its prior"
+                )
+        return x
+
+    def curvature(self, mode: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Minus the Hessian of the log posterior, by central differences of its exact gradient."""
+        d = mode.size
+        out = np.empty((d, d))
+        at_mode = self.latest
+        for j in range(d):
+            step = np.zeros(d)
+            step[j] = _DIFFERENCE
+            up = self.evaluate(mode + step, "curvature", at_mode)[1]
+            down = self.evaluate(mode - step, "curvature", at_mode)[1]
+            out[j] = -(up - down) / (2.0 * _DIFFERENCE)
+        return 0.5 * (out + out.T)
+
+    def lattice(
+        self, mode: NDArray[np.float64], basis: NDArray[np.float64], value: float, best: Any
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64], list[Any]]:
+        """Points z on the lattice, their log posterior and states, grown from the mode outward."""
+        d = mode.size
+        origin = (0,) * d
+        values = {origin: value}
+        states = {origin: best}
+        queue = [origin]
+        while queue and len(states) < _MOST_POINTS:
+            parent = queue.pop(0)
+            if values[parent] < value - _DROP:
+                continue
+            for j, side in itertools.product(range(d), (-1, 1)):
+                child = tuple(c + side * (i == j) for i, c in enumerate(parent))
+                if child in values or len(states) >= _MOST_POINTS:
+                    continue
+                at = mode + basis @ (_STEP * np.array(child))
+                inside = np.all((at > self.outer.lower[self.outer.free]) & (at < self.outer.upper[self.outer.free]))
+                if not inside:
+                    continue
+                values[child], _, states[child] = self.evaluate(at, "integration", states[parent].mode)
+                queue.append(child)
+        keys = list(values)
+        return (
+            _STEP * np.array(keys, dtype=float).reshape(len(keys), d),
+            np.array([values[k] for k in keys]),
+            [states[k] for k in keys],
+        )
+
+
+def _marginals(
+    points: NDArray[np.float64],
+    values: NDArray[np.float64],
+    mode: NDArray[np.float64],
+    basis: NDArray[np.float64],
+    index: NDArray[np.int64],
+) -> dict[int, tuple[NDArray[np.float64], NDArray[np.float64]]]:
+    """Discrete marginals of theta on a fine lattice, through an interpolant of the log density.
+
+    A cubic radial interpolant with a quadratic part reproduces a Gaussian exactly and bends with skewness.
+    """
+    d = points.shape[1]
+    needed = (d + 1) * (d + 2) // 2
+    fine_step = 0.1 if d == 1 else 0.25
+    axes = [np.arange(points[:, j].min() - _STEP / 2, points[:, j].max() + _STEP, fine_step) for j in range(d)]
+    fine = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, d)
+    near = np.min(np.max(np.abs(fine[:, None, :] - points[None]), axis=2), axis=1) <= _STEP / 2 + 1e-9
+    fine = fine[near]
+    spread = np.all(np.ptp(points, axis=0) > _STEP * 1.5)
+    degree = 2 if len(points) > needed and spread else 1
+    density = RBFInterpolator(points, values - values.max(), kernel="cubic", degree=degree)(fine)
+    weight = np.exp(np.minimum(density, 1.0))
+    weight /= weight.sum()
+    theta = mode + fine @ basis.T
+    return {int(j): (theta[:, at], weight) for at, j in enumerate(index)}
+
+
+def weighted_quantile(
+    values: NDArray[np.float64], weights: NDArray[np.float64], probability: float
+) -> float:
+    """Quantile of a fine discrete distribution, each atom spread over its place in the order."""
+    order = np.argsort(values, kind="stable")
+    cumulative = np.cumsum(weights[order]) - 0.5 * weights[order]
+    return float(np.interp(probability, cumulative, values[order]))
