@@ -240,6 +240,11 @@ def _covariates(tables: list[Mapping[str, Any]], here: Place) -> tuple[Covariate
                 raise InputError(
                     f'{place} the key "{key}" does not apply to a covariate given by {sources[0]}'
                 )
+        if sources[0] in ("column", "factor") and covariate.at is None:
+            raise InputError(
+                f'{place} the key "at" is missing; accepted: the number or level of '
+                f'"{table[sources[0]]}" that the maps are made for'
+            )
         found.append(covariate)
     return tuple(found)
 

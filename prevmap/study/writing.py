@@ -64,18 +64,24 @@ def checked_sites(survey: Survey) -> pd.DataFrame:
     """
     frame = survey.frame
     degrees = frame.geometry.to_crs("EPSG:4326")
+    own = {name: _free_name(name, frame.columns) for name in ("row", "placed", "longitude", "latitude")}
     placed = pd.DataFrame(frame.drop(columns="geometry"))
-    placed.insert(0, "placed", True)
-    placed.insert(1, "longitude", degrees.x.to_numpy())
-    placed.insert(2, "latitude", degrees.y.to_numpy())
+    placed.insert(0, own["placed"], True)
+    placed.insert(1, own["longitude"], degrees.x.to_numpy())
+    placed.insert(2, own["latitude"], degrees.y.to_numpy())
     parts = [placed]
     if len(survey.unplaced):
         unplaced = pd.DataFrame(survey.unplaced)
-        unplaced.insert(0, "placed", False)
+        unplaced.insert(0, own["placed"], False)
         parts.append(unplaced)
-    table = pd.concat(parts)
-    table.index.name = "row"
-    return table.reset_index()
+    return pd.concat(parts).rename_axis(index=own["row"]).reset_index()
+
+
+def _free_name(name: str, taken: pd.Index) -> str:
+    """Return the name, with underscores added while the survey has a column of that name."""
+    while name in taken:
+        name += "_"
+    return name
 
 
 def write_tables(survey: Survey, findings: pd.DataFrame, internal: Path) -> None:
