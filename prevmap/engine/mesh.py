@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.sparse import coo_matrix, csc_matrix, csr_matrix
-from scipy.spatial import Delaunay, cKDTree
+from scipy.spatial import ConvexHull, Delaunay, cKDTree
 
 from prevmap.errors import InputError
 
@@ -21,7 +21,7 @@ _ROW = math.sqrt(3.0) / 2.0  # distance between lattice rows, in edges
 _NEIGHBOURS = np.array([[0, 0], [1, 0], [-1, 0], [0, 1], [0, -1], [1, -1], [-1, 1]], dtype=np.int64)
 _ON_EDGE = 1e-9  # barycentric slack: a point this near the outer edge is on it, whatever the rounding says
 _SLIVER_DEG = 20.0  # hull triangles narrower than this only fill the notches between outer nodes
-_LATTICE_LIMIT = 50_000_000
+_LATTICE_LIMIT = 10_000_000
 _WINDOW = 65_536
 
 
@@ -125,7 +125,7 @@ def equilateral_lattice(bounds: tuple[float, float, float, float], edge_km: floa
     Raises
     ------
     InputError
-        If the lattice would have more than 50 million points.
+        If the lattice would have more than 10 million points.
 
     Examples
     --------
@@ -244,7 +244,7 @@ def grade_mesh(
     margin_km : float
         Every point up to this distance from an inner point lies in the mesh.
     growth : float
-        How much the edge may grow from ring to ring, between 1.1 and 3.
+        How much the edge may grow from ring to ring, between 1.1 and 1.5.
     max_nodes : int
         Most nodes accepted.
 
@@ -265,7 +265,7 @@ def grade_mesh(
     At distance d from the zone the edge may be edge_km (1 + (growth - 1) d / edge_km), which grows by
     the factor `growth` per ring of its own width. The largest edge_km 2^k within that is used: the
     points with every 2^k-th row and column are again an equilateral lattice, so that rings need no
-    new directions and their triangles keep angles of about 30 degrees or more.
+    new directions, and where they meet the triangles have angles of 30 degrees or more.
     """
     _check_lengths(edge_km, margin_km)
     _check_growth(growth)
@@ -273,12 +273,12 @@ def grade_mesh(
     if given.ndim != 2 or given.shape[1] != 2 or len(given) == 0 or not np.isfinite(given).all():
         raise ValueError(f"inner must be finite and of shape (k, 2) with k >= 1; found shape {given.shape}")
     origin = given[np.lexsort((given[:, 0], given[:, 1]))[0]]
-    cells = _unique_cells(_lattice_cells(given, origin, edge_km))
+    zone = _unique_cells(_lattice_cells(given, origin, edge_km))
+    if len(zone) > max_nodes:
+        _refuse(zone, len(zone), edge_km, margin_km, growth, max_nodes)
+    cells = np.concatenate([zone, *_rings(zone, edge_km, margin_km, growth)])
     if len(cells) > max_nodes:
-        _refuse(cells, len(cells), edge_km, margin_km, growth, max_nodes)
-    cells = np.concatenate([cells, *_rings(cells, edge_km, margin_km, growth)])
-    if len(cells) > max_nodes:
-        _refuse(cells[: len(given)], len(cells), edge_km, margin_km, growth, max_nodes)
+        _refuse(zone, len(cells), edge_km, margin_km, growth, max_nodes)
     cells = cells[np.lexsort((cells[:, 0], cells[:, 1]))]
     shape = _cell_positions(cells)
     triangles = _peel_hull(shape, _triangulate(shape))
@@ -451,8 +451,8 @@ def _check_lengths(edge_km: float, margin_km: float) -> None:
 
 
 def _check_growth(growth: float) -> None:
-    if not 1.1 <= growth <= 3.0:
-        raise InputError(f"The growth of the mesh edge from ring to ring must be 1.1 to 3; found {growth}.")
+    if not 1.1 <= growth <= 1.5:  # above, a level of the rings gets too thin to part the next two
+        raise InputError(f"The growth of the mesh edge from ring to ring must be 1.1 to 1.5; found {growth}.")
 
 
 def _level(distance: Any, growth: float) -> Any:
@@ -463,7 +463,6 @@ def _level(distance: Any, growth: float) -> Any:
 def _nodes_estimate(area: float, perimeter: float, edge: float, margin: float, growth: float) -> int:
     """Nodes of a mesh over a zone that is already grown, given its area and outline."""
     cell = _ROW * edge**2
-    # A zone's lattice points stand for the zone grown by half an edge.
     nodes = area / cell
     top = int(_level(margin / edge, growth))
     for level in range(top + 1):
@@ -551,24 +550,50 @@ def _outline(cells: Integers) -> Integers:
 def _rings(inner: Integers, edge_km: float, margin_km: float, growth: float) -> list[Integers]:
     """Lattice cells around the inner ones: every 2^k-th row and column at the distances of level k."""
     outline = _outline(inner)
-    tree = cKDTree(_cell_positions(outline))
+    positions = _cell_positions(outline)
+    tree = cKDTree(positions)
     inner_keys = _cell_keys(inner)
     margin = margin_km / edge_km
     top = int(_level(margin, growth))
+    # One spacing more, so that the triangle around any point of the margin has its corners.
+    reach = margin + 2.0**top
+    limits = _around(positions, reach)
+    widest = float(np.ptp(positions, axis=0).sum()) + 2.0 * reach
     rings = []
-    for level in range(top + 1):
+    far = 0.0
+    level = 0
+    while far <= widest:
         spacing = 1 << level
-        far = (2.0 ** (level + 1) - 1.0) / (growth - 1.0) if level < top else margin + spacing
+        near, far = far, (2.0 ** (level + 1) - 1.0) / (growth - 1.0)
+        if level == top:
+            far = max(far, reach)
         coarse = _unique_cells(outline // spacing)
         # A step of six neighbours reaches at least sqrt(3)/2 spacings; two more cover the rounding above.
-        for _ in range(math.ceil(far / spacing / _ROW) + 2):
+        for _ in range(math.ceil(min(far, widest) / spacing / _ROW) + 2):
             coarse = _unique_cells((coarse[:, None, :] + _NEIGHBOURS).reshape(-1, 2))
         cells = coarse * spacing
         cells = cells[~np.isin(_cell_keys(cells), inner_keys)]
-        distance = tree.query(_cell_positions(cells))[0]
-        keep = (np.minimum(_level(distance, growth), top) == level) & (distance <= far + 1e-9)
-        rings.append(cells[keep])
+        places = _cell_positions(cells)
+        distance = tree.query(places)[0]
+        kept = (distance > near - 1e-9) & (distance <= far - 1e-9)
+        if level >= top:
+            # Coarser levels go a little beyond the convex edge to complete the triangles that it cuts.
+            slack = spacing - 2.0**top + 1e-9
+            kept &= (places @ limits[:, :2].T <= slack - limits[:, 2]).all(axis=1)
+        rings.append(cells[kept])
+        level += 1
     return rings
+
+
+def _around(positions: Floats, reach: float) -> Floats:
+    """Half-planes (normal and offset, (h, 3)) around all points within a distance of the positions.
+
+    The outer edge is convex: between parts of a zone and in its bays the rings go on growing, which takes
+    few nodes and leaves no gap to be bridged by needles.
+    """
+    angle = 2.0 * math.pi * (np.arange(24) + 0.5) / 24
+    circle = reach / math.cos(math.pi / 24) * np.column_stack([np.cos(angle), np.sin(angle)])
+    return ConvexHull((positions[:, None, :] + circle).reshape(-1, 2)).equations
 
 
 def _triangulate(shape: Floats) -> Integers:
