@@ -119,7 +119,7 @@ def test_a_geopackage_keeps_no_time_of_writing(tmp_path):
         layer.to_file(tmp_path / name, layer="units", driver="GPKG")
         with sqlite3.connect(tmp_path / name) as connection:  # as if written at another time
             connection.execute(
-                "UPDATE gpkg_contents SET last_change = ?", (f"2020-01-01T00:00:00.00{len(name)}Z",)
+                "UPDATE gpkg_contents SET last_change = ?", (f"{year}-01-01T00:00:00.000Z",)
             )
         connection.close()
         settle_geopackage(tmp_path / name)

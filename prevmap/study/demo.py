@@ -54,7 +54,10 @@ def copy_demo(folder: Path) -> Path:
                     f"{folder}: the folder is not empty and its {file} is not the demo's; accepted: a new "
                     f"or empty folder; or run a study of your own there: prevmap run {folder / 'study.toml'}"
                 )
-    for file in files:
-        (folder / file).parent.mkdir(parents=True, exist_ok=True)
-        shutil.copyfile(source / file, folder / file)
+    try:
+        for file in files:
+            (folder / file).parent.mkdir(parents=True, exist_ok=True)
+            shutil.copyfile(source / file, folder / file)
+    except OSError as error:
+        raise InputError(f"{folder}: the demo cannot be copied there: {error.strerror}") from error
     return folder / "study.toml"

@@ -65,8 +65,11 @@ def replacing(folder: Path) -> Iterator[Path]:
     Whatever ends the block otherwise, an interruption included, leaves `folder` as it was and removes the
     new folder. Files of the user's own in `folder` stay.
     """
-    folder.parent.mkdir(parents=True, exist_ok=True)
-    fresh = Path(tempfile.mkdtemp(prefix=f".{folder.name}.partial-", dir=folder.parent))
+    try:
+        folder.parent.mkdir(parents=True, exist_ok=True)
+        fresh = Path(tempfile.mkdtemp(prefix=f".{folder.name}.partial-", dir=folder.parent))
+    except OSError as error:
+        raise InputError(f"output folder {folder}: it cannot be made: {error.strerror}") from error
     try:
         yield fresh
         _move_parts(fresh, folder)
