@@ -1,0 +1,176 @@
+"""Where survey sites lie: inside the study area or how far from it, and in which unit."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import geopandas as gpd
+import numpy as np
+import pandas as pd
+import shapely
+from numpy.typing import NDArray
+
+from prevmap.inputs.findings import Finding, row_label
+from prevmap.inputs.layer import nearest
+
+if TYPE_CHECKING:
+    from prevmap.inputs.region import Region
+    from prevmap.inputs.survey import Survey
+
+OUTSIDE = -1
+
+
+def site_findings(
+    frame: gpd.GeoDataFrame, region: Region, margin_km: float
+) -> tuple[NDArray[np.bool_], list[Finding]]:
+    """Return which rows of a survey lie near enough to the region to be kept, and the findings.
+
+    Parameters
+    ----------
+    frame : GeoDataFrame, n rows
+        Accepted rows of a survey; column "site" where there is one.
+    region : Region
+        The study area.
+    margin_km : float
+        Rows outside by up to this distance are kept with a note; rows farther out are errors.
+
+    Returns
+    -------
+    keep : (n,) bool
+    findings : list of Finding
+    """
+    xy = 1000.0 * region.project(frame)
+    points = shapely.points(xy)
+    distance_km = shapely.distance(region.boundary, points) / 1000.0
+    excluded = np.zeros(len(points), dtype=bool)
+    if region.exclude is not None:
+        excluded = (distance_km > 0.0) & shapely.intersects(region.exclude, points)
+    keep = excluded | (distance_km <= margin_km)
+    sites = _texts(frame, "site")
+    findings = []
+    for place in np.flatnonzero(distance_km > 0.0):
+        row, site = row_label(frame.index[place]), sites[place]
+        away = f"{distance_km[place]:.3g} km"
+        if excluded[place]:
+            what = f"lies on excluded land (such as water), {away} from the study area's land"
+            findings.append(Finding(row, site, "position", "note", what, "kept; check the position"))
+        elif keep[place]:
+            what = f"lies {away} outside the study area"
+            action = f"kept: it is within {margin_km:.3g} km"
+            findings.append(Finding(row, site, "position", "note", what, action))
+        else:
+            what = f"lies {away} outside the study area (more than {margin_km:.3g} km)"
+            action = "row not used; check longitude and latitude, or the region"
+            findings.append(Finding(row, site, "position", "error", what, action))
+    return keep, findings
+
+
+def assign_units(survey: Survey, region: Region) -> tuple[NDArray[np.int64], list[Finding]]:
+    """Return the unit each accepted row of a survey lies in, by position, and the findings.
+
+    A row outside every unit counts in the unit it declares where that is also the nearest unit (a school on
+    the shore of a roughly drawn coast); the finding says so.
+
+    Parameters
+    ----------
+    survey : Survey
+        With n accepted rows.
+    region : Region
+
+    Returns
+    -------
+    unit : (n,) int
+        Row of ``region.units``; -1 outside every unit. The first of overlapping units is taken.
+    findings : list of Finding
+        A declared unit that is unknown or is not the one at the position.
+    """
+    frame = survey.frame
+    unit = np.full(len(frame), OUTSIDE, dtype=np.int64)
+    if not region.has_units or not len(frame):
+        return unit, []
+    points = shapely.points(1000.0 * region.project(frame))
+    tree = shapely.STRtree(np.asarray(region.units.geometry.array, dtype=object))
+    which, inside = tree.query(points, predicate="intersects")
+    # Written in reverse order of units, so that the first of overlapping units stays.
+    order = np.argsort(-inside, kind="stable")
+    unit[which[order]] = inside[order]
+    if not survey.has_unit:
+        return unit, []
+    names = region.units["unit"].tolist()
+    codes = region.units["code"].tolist()
+    declared = _texts(frame, "unit")
+    sites = _texts(frame, "site")
+    findings = []
+    for place, text in enumerate(declared):
+        if not text:
+            continue
+        row = row_label(frame.index[place])
+        here = names[unit[place]] if unit[place] >= 0 else None
+        named = _place_of(text, names, codes)
+        if named == unit[place]:
+            continue
+        if named < 0:
+            what = f"declares unit {text!r}, which is not in the region{_hint(text, names)}"
+            action = f"counted in {here!r} by position" if here is not None else "counted in no unit"
+        elif here is None and tree.nearest(points[place]) == named:
+            unit[place] = named
+            what = f"lies outside every unit; the nearest is the unit it declares, {text!r}"
+            findings.append(Finding(row, sites[place], "unit", "note", what, f"counted in {text!r}"))
+            continue
+        elif here is None:
+            what = f"lies outside every unit but declares {text!r}, which is not the nearest"
+            action = "counted in no unit; check the position"
+        else:
+            what = f"declares unit {text!r} but lies in {here!r}"
+            action = f"counted in {here!r} by position; check both"
+        findings.append(Finding(row, sites[place], "unit", "warning", what, action))
+    return unit, findings
+
+
+def assign_unplaced(survey: Survey, region: Region) -> tuple[NDArray[np.int64], list[Finding]]:
+    """Return the unit each row without a position names, and the findings.
+
+    Returns
+    -------
+    unit : (k,) int
+        Row of ``region.units`` for each row of ``survey.unplaced``, by the unit's name or else its code; -1
+        where the region has no such unit.
+    findings : list of Finding
+    """
+    frame = survey.unplaced
+    unit = np.full(len(frame), OUTSIDE, dtype=np.int64)
+    findings = []
+    names = region.units["unit"].tolist()
+    codes = region.units["code"].tolist()
+    sites = _texts(frame, "site")
+    for place, text in enumerate(_texts(frame, "unit")):
+        row = row_label(frame.index[place])
+        unit[place] = _place_of(text or "", names, codes)
+        if unit[place] >= 0:
+            what, severity = f"has no position; its unit is {names[unit[place]]!r}", "note"
+            action = "enters only the unit's direct estimate"
+        else:
+            what = f"has no position, and its unit {text!r} is not in the region{_hint(text or '', names)}"
+            severity, action = "error", "row not used"
+        findings.append(Finding(row, sites[place], "unit", severity, what, action))  # type: ignore[arg-type]
+    return unit, findings
+
+
+def _place_of(text: str, names: list[str], codes: list[Any]) -> int:
+    wanted = text.strip().casefold()
+    for labels in (names, codes):
+        folded = [str(label).strip().casefold() if label is not None else None for label in labels]
+        if wanted and wanted in folded:
+            return folded.index(wanted)
+    return OUTSIDE
+
+
+def _hint(text: str, names: list[str]) -> str:
+    near = nearest(text, names)
+    return f" (did you mean {near}?)" if near else ""
+
+
+def _texts(frame: Any, name: str) -> list[str | None]:
+    if name not in frame.columns:
+        return [None] * len(frame)
+    return [None if value is None or pd.isna(value) else str(value) for value in frame[name]]
