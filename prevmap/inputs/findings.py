@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Hashable, Iterable, Sequence
 from dataclasses import dataclass
-from typing import Literal
+from typing import Literal, NamedTuple
 
 import pandas as pd
 
@@ -51,6 +51,16 @@ class Finding:
         place = [f"row {self.row}" if self.row is not None else "", f"site {self.site}" if self.site else ""]
         where = ", ".join(part for part in [*place, self.field or ""] if part)
         return f"{where}: {self.what}" if where else self.what
+
+
+class Remark(NamedTuple):
+    """A finding before its row has a label: `at` is the place of the row in the table, None for all of it."""
+
+    at: int | None
+    field: str
+    severity: Severity
+    what: str
+    action: str
 
 
 def findings_frame(findings: Sequence[Finding]) -> pd.DataFrame:

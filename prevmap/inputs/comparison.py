@@ -1,0 +1,161 @@
+"""What the accepted rows say about each other: repeats, sites with several rows or places, missing zeros."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import Any
+
+import geopandas as gpd
+import numpy as np
+import pandas as pd
+from pyproj import CRS, Geod
+
+from prevmap.inputs.findings import Finding, listed, row_label
+from prevmap.inputs.reading import cell_text
+
+# Where more sites than this share a finding, one finding for all of them is easier to read.
+LISTED_SITES = 10
+
+# A survey without one negative site is doubted where that has less than this probability.
+NO_ZERO_PROBABILITY = 0.01
+
+
+def comparison_findings(frame: gpd.GeoDataFrame, unplaced: pd.DataFrame) -> list[Finding]:
+    """Return what the rows of a survey say about each other.
+
+    Parameters
+    ----------
+    frame : GeoDataFrame
+        Accepted rows with columns site, examined, positive, geometry; index: row.
+    unplaced : DataFrame
+        Rows without a position, same columns without geometry.
+
+    Returns
+    -------
+    list of Finding
+        No error among them: every row stays in use.
+    """
+    placed = pd.DataFrame(frame.drop(columns="geometry"))
+    placed["geometry"] = frame.geometry.to_wkb(hex=True)
+    # As objects, because concat would look for a common type of columns that are empty in one part.
+    rows = pd.concat([placed.astype(object), unplaced.astype(object)]) if len(unplaced) else placed
+    return [
+        *_missing_zeros(rows),
+        *_identical(rows),
+        *_several_rows(rows),
+        *_several_positions(frame),
+        *_shared_positions(frame),
+    ]
+
+
+def _identical(rows: pd.DataFrame) -> list[Finding]:
+    text = rows.map(lambda cell: cell_text(cell) if not isinstance(cell, list | dict | set) else repr(cell))
+    keys = pd.Series(list(map(tuple, text.to_numpy(dtype=object))), dtype=object)
+    repeated = keys.duplicated().to_numpy()
+    if not repeated.any():
+        return []
+    if (rows["examined"] == 1).all():
+        what = f"{int(repeated.sum())} rows are identical to another; every row is one person"
+        return [Finding(None, None, None, "note", what, "kept and pooled by site")]
+    first: dict[object, int] = {}
+    findings = []
+    for at, key in enumerate(keys):
+        origin = first.setdefault(key, at)
+        if origin != at:
+            what = f"identical to row {row_label(rows.index[origin])} in every column"
+            action = "kept and pooled; leave it out if it was entered twice"
+            row, site = row_label(rows.index[at]), str(rows["site"].iloc[at])
+            findings.append(Finding(row, site, None, "warning", what, action))
+    return findings
+
+
+def _several_rows(rows: pd.DataFrame) -> list[Finding]:
+    groups = {site: list(map(row_label, labels)) for site, labels in _by(rows["site"], rows.index)}
+    found = [
+        Finding(labels[0], site, "site", "note", f"site has {len(labels)} rows: {listed(labels)}", _POOLED)
+        for site, labels in groups.items()
+        if len(labels) > 1
+    ]
+    return _gathered(found, "sites have several rows", _POOLED)
+
+
+_POOLED = "rows with equal covariates are pooled; other rows of the site share one site effect"
+
+
+def _several_positions(frame: gpd.GeoDataFrame) -> list[Finding]:
+    action = "each row keeps its position; correct the site or the position if they are one place"
+    x, y = frame.geometry.x.to_numpy(), frame.geometry.y.to_numpy()
+    found = []
+    for site, places in _by(frame["site"], range(len(frame))):
+        away = _distance_km(frame.crs, x[places], y[places])
+        if (x[places] != x[places[0]]).any() or (y[places] != y[places[0]]).any():
+            farthest = places[int(np.argmax(away))]
+            row, first = row_label(frame.index[farthest]), row_label(frame.index[places[0]])
+            positions = len(set(zip(x[places], y[places], strict=True)))
+            what = f"site has {positions} positions; row {row} is {_length(away.max())} from row {first}"
+            found.append(Finding(row, site, "site", "warning", what, action))
+    return _gathered(found, "sites have several positions", action)
+
+
+def _shared_positions(frame: gpd.GeoDataFrame) -> list[Finding]:
+    action = "kept as different sites with a site effect each; give them one site id if they are one place"
+    where = list(zip(frame.geometry.x, frame.geometry.y, strict=True))
+    found = []
+    for _, places in _by(where, range(len(frame))):
+        sites = list(dict.fromkeys(frame["site"].iloc[places]))
+        if len(sites) > 1:
+            row = row_label(frame.index[places[0]])
+            what = f"sites share one position: {listed(sites)}"
+            found.append(Finding(row, sites[0], "site", "note", what, action))
+    return _gathered(found, "positions are shared by several sites", action)
+
+
+def _missing_zeros(rows: pd.DataFrame) -> list[Finding]:
+    """Warn where no site is free of positives although some should be.
+
+    Under one common prevalence p the probability that none of the sites has zero positive is
+    prod(1 - (1 - p)^n). Real prevalence varies between sites, which makes zeros more likely still, and
+    leaving zeros out raises p: both make the check cautious.
+    """
+    sites = rows.groupby("site")[["examined", "positive"]].sum().astype(float)
+    examined = sites["examined"].to_numpy(dtype=float)
+    share = float(sites["positive"].sum() / examined.sum())
+    if (sites["positive"] == 0).any() or share >= 1.0:
+        return []
+    zero = np.exp(examined * np.log1p(-share))
+    none = float(np.exp(np.log1p(-zero).sum()))
+    if none >= NO_ZERO_PROBABILITY:
+        return []
+    what = (
+        f"none of the {len(sites)} sites has zero positive; at the overall {100 * share:.1f} % about "
+        f"{zero.sum():.1f} would be expected, and none at all has probability {none:.2g}"
+    )
+    action = "used as they are; if sites without positives were left out, prevalence is too high: add them"
+    return [Finding(None, None, "positive", "warning", what, action)]
+
+
+def _by(keys: Iterable[Any], members: Iterable[Any]) -> list[tuple[Any, list[Any]]]:
+    groups: dict[Any, list[Any]] = {}
+    for key, member in zip(keys, members, strict=True):
+        groups.setdefault(key, []).append(member)
+    return list(groups.items())
+
+
+def _gathered(found: list[Finding], text: str, action: str) -> list[Finding]:
+    if len(found) <= LISTED_SITES:
+        return found
+    what = f"{len(found)} {text}: {listed(finding.site for finding in found)}"
+    return [Finding(None, None, "site", found[0].severity, what, action)]
+
+
+def _distance_km(crs: CRS, x: np.ndarray, y: np.ndarray) -> np.ndarray:
+    """Return (n,) distances from the first point to each."""
+    if crs.is_geographic:
+        ellipsoid = crs.get_geod() or Geod(ellps="WGS84")
+        start = (np.full(len(x), x[0]), np.full(len(y), y[0]))
+        return np.asarray(ellipsoid.inv(*start, x, y)[2]) / 1000.0
+    return np.hypot(x - x[0], y - y[0]) * crs.axis_info[0].unit_conversion_factor / 1000.0
+
+
+def _length(km: float) -> str:
+    return f"{km:.1f} km" if km >= 1.0 else f"{1000.0 * km:.0f} m"
