@@ -101,7 +101,7 @@ class Grid:
         return len(self.cell)
 
     def frame_points(self, start: int = 0, stop: int | None = None) -> gpd.GeoDataFrame:
-        """Return the prediction points of cells `start` to `stop` as points in metres, in the order of `cell`."""
+        """Return where cells `start` to `stop` are predicted, as points in metres, in the order of `cell`."""
         xy = 1000.0 * self.xy_km[start:stop]
         index = pd.RangeIndex(start, start + len(xy))
         return gpd.GeoDataFrame(
@@ -143,8 +143,8 @@ def build_grid(
     xy = _prediction_points(region, cell, coverage, shape, origin, edge)
     pair_cell, pair_unit, pair_coverage, land = _pieces(region, cell, shape, bounds)
     grid = Grid(
-        region, edge, shape, origin, cell, xy / 1000.0, coverage, None, pair_cell, pair_unit, pair_coverage, None,
-        population, 0.0, findings_frame([]),
+        region, edge, shape, origin, cell, xy / 1000.0, coverage, None, pair_cell, pair_unit, pair_coverage,
+        None, population, 0.0, findings_frame([]),
     )  # fmt: skip
     return grid if population is None else count_people(grid, population, land, progress)
 

@@ -10,6 +10,7 @@ from typing import Any
 
 import geopandas as gpd
 import numpy as np
+import pandas as pd
 import pyogrio
 import shapely
 from numpy.typing import NDArray
@@ -19,6 +20,7 @@ from pyproj.exceptions import CRSError
 from prevmap.errors import InputError
 from prevmap.inputs.coverage import areal
 from prevmap.inputs.findings import Finding
+from prevmap.inputs.working_crs import check_degrees
 
 LONG_EDGE_DEG = 0.1  # longer edges in degrees get extra corners, so that they stay straight in degrees
 
@@ -61,6 +63,7 @@ def read_layer(
     if frame.empty:
         raise InputError(f"{file}: the file holds no features.")
     frame = frame.set_crs(_agreed_crs(file, frame.crs, crs, must_agree), allow_override=True)
+    check_degrees(np.asarray(frame.geometry.array, dtype=object), frame.crs, str(file))
     frame.index = np.arange(1, len(frame) + 1)
     frame.index.name = "row"
     return frame, findings
@@ -120,6 +123,21 @@ def column(frame: Any, name: str, source: str, role: str) -> Any:
     near = nearest(name, have)
     hint = f" Did you mean {near}?" if near else ""
     raise InputError(f"{source}: no column {name!r} ({role}).{hint} Columns: {', '.join(have) or 'none'}.")
+
+
+def label_text(value: Any) -> str:
+    """Return an entry of a table as text: trimmed, whole numbers without a decimal point, "" where empty.
+
+    Examples
+    --------
+    >>> label_text(12.0), label_text(" north "), label_text(None)
+    ('12', 'north', '')
+    """
+    if value is None or value is pd.NA or value is pd.NaT or value != value:  # NaN alone differs from itself
+        return ""
+    if isinstance(value, float) and value.is_integer():
+        return str(int(value))
+    return str(value).strip()
 
 
 def nearest(name: str, known: Iterable[str]) -> str:

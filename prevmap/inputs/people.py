@@ -58,11 +58,11 @@ def count_people(grid: Grid, population: Population, land: NDArray[Any], progres
     """
     counter = _Counter(grid, population)
     findings: list[Finding] = []
-    has_units = grid.region.has_units
-    if has_units:
+    people: Floats
+    if grid.region.has_units:
         pairs = (grid.pair_cell, grid.pair_unit, grid.pair_coverage)
         pair_people, covered, whole = counter.pieces(*pairs, land, progress)
-        people = np.bincount(grid.pair_cell, weights=pair_people, minlength=len(grid))
+        people = _per_cell(grid, pair_people)
     else:
         all_cells = np.arange(len(grid))
         boundary = np.asarray([grid.region.boundary], dtype=object)
@@ -159,13 +159,17 @@ class _Counter:
         return people, covered, whole
 
 
+def _per_cell(grid: Grid, of_pieces: Floats) -> Floats:
+    return np.asarray(np.bincount(grid.pair_cell, weights=of_pieces, minlength=len(grid)), dtype=np.float64)
+
+
 def _no_overlap(grid: Grid, population: Population) -> str:
     raster = population.raster
     to_raster = Transformer.from_crs(grid.region.crs, raster.crs, always_xy=True)
     region = to_raster.transform_bounds(*grid.region.boundary.bounds)
     return (
-        f"{population.path}: the population raster has no value in the region. In {raster.crs.name}, the raster "
-        f"covers {describe_bounds(raster.bounds)}, the region {describe_bounds(region)}."
+        f"{population.path}: the population raster has no value in the region. In {raster.crs.name}, the "
+        f"raster covers {describe_bounds(raster.bounds)}, the region {describe_bounds(region)}."
     )
 
 
@@ -191,7 +195,7 @@ def _once_where_units_overlap(grid: Grid, people: Floats, counter: _Counter) -> 
     """Return people per cell with land shared by overlapping units counted once."""
     if not len(grid.pair_cell):
         return people
-    claimed = np.bincount(grid.pair_cell, weights=grid.pair_coverage, minlength=len(grid))
+    claimed = _per_cell(grid, grid.pair_coverage)
     twice = np.flatnonzero(claimed > grid.coverage + 1e-6)
     if not len(twice):
         return people
@@ -238,7 +242,7 @@ def _rescaled(
         what = f"no official total for {len(left)} units: {listed(left)}"
         findings.append(Finding(None, None, "unit_total", "note", what, "people there as in the raster"))
     scaled = pair_people * factor[grid.pair_unit]
-    raw = np.bincount(grid.pair_cell, weights=pair_people, minlength=len(grid))
-    new = np.bincount(grid.pair_cell, weights=scaled, minlength=len(grid))
+    raw = _per_cell(grid, pair_people)
+    new = _per_cell(grid, scaled)
     ratio = np.divide(new, raw, out=np.ones_like(new), where=raw > 0.0)
     return scaled, people * ratio, unplaced, findings

@@ -101,11 +101,11 @@ class Population:
         values = self.raster.read(row, col, rows, cols, source)
         wrong = (values < 0.0) | np.isinf(values)
         if wrong.any():
-            place = tuple(np.argwhere(wrong)[0])
+            place, many = tuple(np.argwhere(wrong)[0]), int(wrong.sum())
             left, _, _, top = self.raster.edges(row + int(place[0]), col + int(place[1]), 1, 1)
             raise InputError(
-                f"{self.path}: {int(wrong.sum())} pixels near the region hold no possible number of people, for "
-                f"example {values[place]:g} at x {left:.6g}, y {top:.6g}. Expected: 0 or more; if this value "
+                f"{self.path}: {many} pixels near the region hold no possible number of people, "
+                f"for example {values[place]:g} at x {left:.6g}, y {top:.6g}. Expected: 0 or more; if this value "
                 "means 'no data', declare it as the raster's nodata value."
             )
         if self.kind == "density":

@@ -18,7 +18,7 @@ from scipy.spatial import cKDTree
 from prevmap.errors import InputError
 from prevmap.inputs.findings import Finding, findings_frame
 from prevmap.inputs.grid import build_grid
-from prevmap.inputs.layer import column, features, polygons, read_layer, reproject
+from prevmap.inputs.layer import column, features, label_text, polygons, read_layer, reproject
 from prevmap.inputs.placement import assign_units, assign_unplaced, site_findings
 from prevmap.inputs.working_crs import choose_working_crs
 
@@ -302,7 +302,9 @@ def _unit_table(
     if code is not None:
         table["code"] = _labels(column(plain, code, source, "code of the units"), code, source)
     if parent is not None:
-        table["parent"] = [_label(value) or None for value in column(plain, parent, source, "parent area")]
+        table["parent"] = [
+            label_text(value) or None for value in column(plain, parent, source, "parent area")
+        ]
     table = table.astype(object)
     for each in plain.columns:
         if each in (used, code, parent):
@@ -327,16 +329,8 @@ def _name_column(plain: pd.DataFrame, source: str, code: str | None) -> str:
     )
 
 
-def _label(value: Any) -> str:
-    if value is None or (np.isscalar(value) and pd.isna(value)):
-        return ""
-    if isinstance(value, float) and value.is_integer():
-        return str(int(value))
-    return str(value).strip()
-
-
 def _labels(values: pd.Series, name: str, source: str) -> list[str]:
-    labels = [_label(value) for value in values]
+    labels = [label_text(value) for value in values]
     empty = [row for row, label in zip(values.index, labels, strict=True) if not label]
     if empty:
         raise InputError(f"{source}: column {name!r} is empty in {features(empty)}. Every unit needs one.")

@@ -86,7 +86,7 @@ def choose_working_crs(geometries: NDArray[Any], crs: CRS) -> WorkingCrs:
             f"The coordinate system {crs.name!r} is neither geographic nor projected. "
             "Accepted: longitude and latitude, or a projected system such as a UTM zone."
         )
-    _check_degrees(geometries, crs)
+    check_degrees(geometries, crs)
     lon, lat = sample_lonlat(geometries, crs)
     scored = [
         (distance_distortion(candidate, lon, lat), candidate) for candidate in candidates(crs, lon, lat)
@@ -183,8 +183,8 @@ def sample_lonlat(geometries: NDArray[Any], crs: CRS) -> tuple[Floats, Floats]:
     usable = np.isfinite(lon) & np.isfinite(lat)
     if not usable.all():
         raise InputError(
-            f"Coordinates such as x = {points[~usable][0, 0]:g}, y = {points[~usable][0, 1]:g} do not exist in "
-            f"{crs.name!r}. Is the coordinate system the right one?"
+            f"Coordinates such as x = {points[~usable][0, 0]:g}, y = {points[~usable][0, 1]:g} do not exist "
+            f"in {crs.name!r}. Is the coordinate system the right one?"
         )
     if np.ptp(lon) > 180.0:
         lon = np.where(lon < 0.0, lon + 360.0, lon)
@@ -215,14 +215,17 @@ def _middle(values: Floats) -> float:
     return 0.5 * (float(values.min()) + float(values.max()))
 
 
-def _check_degrees(geometries: NDArray[Any], crs: CRS) -> None:
+def check_degrees(geometries: NDArray[Any], crs: CRS, source: str = "") -> None:
+    """Raise an InputError where coordinates of geometries in a geographic `crs` are impossible as degrees."""
     corners = shapely.get_coordinates(geometries)
     impossible = (np.abs(corners[:, 0]) > 360.0) | (np.abs(corners[:, 1]) > 90.0)
-    if impossible.any():
+    if crs.is_geographic and impossible.any():
         x, y = corners[impossible][0]
+        where = f"{source}: " if source else ""
         raise InputError(
-            f"Coordinates such as x = {x:g}, y = {y:g} are impossible as degrees of {crs.name!r}: longitude is "
-            "within 180, latitude within 90. Perhaps they are metres: give the coordinate system as crs=."
+            f"{where}coordinates such as x = {x:g}, y = {y:g} are impossible as degrees "
+            f"of {crs.name!r}: longitude is within 180, latitude within 90. Perhaps they are metres: the "
+            "coordinate system must then be a projected one."
         )
 
 
