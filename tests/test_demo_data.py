@@ -15,6 +15,10 @@ import shapely
 from exactextract import exact_extract
 from rasterio.features import geometry_mask
 
+import prevmap
+from prevmap.inputs.findings import findings_frame
+from prevmap.inputs.placement import assign_units, site_findings
+
 DEMO = Path(__file__).parents[1] / "demo_data"
 PLACES = Path(__file__).parent / "data" / "place_names.txt"
 RASTERS = [
@@ -200,3 +204,41 @@ def test_positives_agree_with_the_truth_within_sampling_error(sites):
 
 def test_the_study_reads_no_truth():
     assert "truth/" not in (DEMO / "study.toml").read_text(encoding="utf-8")
+
+
+def test_the_checks_find_every_fault_and_nothing_else():
+    faults = pd.read_csv(DEMO / "truth" / "faults.csv").set_index("row")
+    columns = {"examined": "examined", "positive": "positive", "lon": "lon", "lat": "lat", "unit": "district"}
+    survey = prevmap.read_survey(DEMO / "sites.csv", site="school_name", **columns)
+    region = prevmap.read_region(DEMO / "districts.geojson", name="district", exclude=DEMO / "lakes.geojson")
+    kept, outside = site_findings(survey.frame, region, margin_km=45)
+    _, units = assign_units(survey, region)
+    found = pd.concat([survey.findings, findings_frame([*outside, *units])])
+    by_row = found.groupby("row")
+    pooled = {
+        row - 1 for row in faults.index[faults["kind"].isin(["identical row", "several rows of one site"])]
+    }
+    assert set(by_row.groups) <= set(faults.index) | pooled
+    for row, fault in faults.iterrows():
+        first = row - 1 if fault["kind"] == "several rows of one site" else row
+        assert first in by_row.groups, fault["kind"]
+    rejected = set(faults.index[faults["fate"] == "rejected"])
+    used = set(survey.frame.index[kept])
+    assert used == set(range(2, survey.rows_read + 2)) - rejected - set(
+        faults.index[faults["fate"] == "unit only"]
+    )
+    assert list(survey.unplaced.index) == list(faults.index[faults["fate"] == "unit only"])
+    errors = {
+        "swapped": "lon and lat exchanged",
+        "zero position": r"\(0, 0\)",
+        "more positive than examined": "greater than examined",
+        "not a number": "'forty'",
+        "examined missing": "missing where positive is 0",
+        "nobody examined": "nobody was examined",
+        "negative": "-3",
+        "impossible position": "95.5",
+        "identical row": "identical to row",
+    }
+    for kind, words in errors.items():
+        row = faults.index[faults["kind"] == kind][0]
+        assert by_row.get_group(row)["what"].str.contains(words).any(), kind
