@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.sparse import csc_matrix, diags, triu
+from scipy.sparse import coo_matrix, csc_matrix, diags, triu
 from scipy.special import k0, k1
 
 from prevmap.engine.mesh import Mesh, finite_elements
@@ -200,11 +200,15 @@ def precision(spde: SpdeMatrices, range_km: float, sd: float) -> csc_matrix:
     Returns
     -------
     (m, m) csc
-        Q; its inverse is the covariance of the node values.
+        Q, on the same pattern for all parameters; its inverse is the covariance of the node values.
     """
-    shape = (spde.nodes, spde.nodes)
-    upper = csc_matrix((precision_upper(spde, range_km, sd), spde.indices, spde.indptr), shape=shape)
-    full = (upper + triu(upper, k=1).T).tocsc()
+    values = precision_upper(spde, range_km, sd)
+    rows, columns = spde.indices, np.repeat(np.arange(spde.nodes), np.diff(spde.indptr))
+    above = rows < columns
+    # Put together from triplets: adding two sparse matrices would drop the stored zeros.
+    entries = np.concatenate([values, values[above]])
+    places = np.concatenate([rows, columns[above]]), np.concatenate([columns, rows[above]])
+    full = coo_matrix((entries, places), shape=(spde.nodes, spde.nodes)).tocsc()
     full.sort_indices()
     return full
 
