@@ -22,7 +22,7 @@ from prevmap.engine.laplace import LatentModel
 from prevmap.engine.mesh import projector
 from prevmap.engine.posterior import Engine, Outer, Posterior, infer, weighted_quantile
 from prevmap.errors import InputError
-from prevmap.inputs.covariates import Design, design
+from prevmap.inputs.design import Design, design
 from prevmap.inputs.findings import Finding, findings_frame
 from prevmap.inputs.grid import Grid
 from prevmap.inputs.placement import assign_units, assign_unplaced, site_findings
@@ -195,7 +195,7 @@ class _Progress:
         if self._told is not None:
             self._told(stage)
         if self._bar is not None:
-            self._bar.set_postfix_str(stage)
+            self._bar.set_postfix_str(stage, refresh=False)
             self._bar.update()
 
     def close(self) -> None:
@@ -236,7 +236,7 @@ def fit_model(
     near = survey.frame[inside]
     designed = design(model.covariates, near, near["site"])
     if not np.any(designed.kept):
-        raise InputError("no site has a value for every covariate", tuple(designed.findings))
+        raise InputError("no site has a value for every covariate: check that the rasters cover the survey")
     kept = inside.copy()
     kept[inside] = designed.kept
     frame = survey.frame[kept]
@@ -261,13 +261,13 @@ def fit_model(
         "smallest_pivot": float(mode.smallest_pivot),
         "seconds": time.perf_counter() - began,
     }
-    found = [position_findings, designed.findings, unit_findings, unplaced_findings]
+    found = [*position_findings, *unit_findings, *unplaced_findings]
     return Fit(
         model, survey, region, engine, int(seed), designed,
         _coefficients(core, posterior, designed.terms),
         _hyperparameters(posterior, resolved),
         float(posterior.log_evidence),
-        _all_findings(survey, region, found),
+        _all_findings(survey, region, designed, found),
         tuple(warnings),
         _sites(rows, row_units[kept], region),
         row_units, unplaced_units,
@@ -447,7 +447,7 @@ def _sites(rows: Rows, unit: NDArray[np.int64], region: Region) -> gpd.GeoDataFr
     return gpd.GeoDataFrame(frame, geometry=gpd.points_from_xy(*(1000.0 * rows.xy_km.T)), crs=region.crs)
 
 
-def _all_findings(survey: Survey, region: Region, found: list[Any]) -> pd.DataFrame:
-    flat: list[Finding] = [f for part in found for f in part]
-    frames = [f for f in (survey.findings, region.findings, findings_frame(flat)) if len(f)]
-    return pd.concat(frames, ignore_index=True) if frames else findings_frame([])
+def _all_findings(survey: Survey, region: Region, designed: Design, found: list[Finding]) -> pd.DataFrame:
+    frames = (survey.findings, region.findings, designed.findings, findings_frame(found))
+    present = [frame for frame in frames if len(frame)]
+    return pd.concat(present, ignore_index=True) if present else findings_frame([])
