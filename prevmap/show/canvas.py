@@ -75,7 +75,7 @@ def plain_text(figure: Figure) -> None:
         text.set_parse_math(False)
 
 
-def figure_bytes(figure: Figure, kind: str = "png", *, dpi: float = 160) -> bytes:
+def figure_bytes(figure: Figure, kind: str = "png", *, dpi: float = 180) -> bytes:
     """Render a figure to bytes that depend on its content only.
 
     Parameters
@@ -99,7 +99,7 @@ def figure_bytes(figure: Figure, kind: str = "png", *, dpi: float = 160) -> byte
     return out.getvalue()
 
 
-def save_figure(figure: Figure, path: str | Path, *, dpi: float = 160) -> Path:
+def save_figure(figure: Figure, path: str | Path, *, dpi: float = 180) -> Path:
     """Write a figure as PNG, SVG or PDF, by the suffix of the path; same figure, same bytes."""
     target = Path(path)
     target.write_bytes(figure_bytes(figure, target.suffix.lstrip(".").lower(), dpi=dpi))

@@ -146,7 +146,7 @@ def map_panel(
     Figure
     """
     with house_style():
-        figure = new_figure(10.8, 12.0)
+        figure = new_figure(9.2, 12.0)
         norm = _shared_norm(surface)
         source = getattr(surface, "fit", surface)
         sheets = [draw_site_map(source, surface.region, figure=figure, norm=norm)]
@@ -269,7 +269,7 @@ def surface_notes(surface: Any) -> list[str]:
         outside = sum("covariates" in str(reason) for reason in reasons[flagged])
         why = []
         if far:
-            why.append(f"{far:,} far from any site")
+            why.append(f"{far:,} farther from every site than the range")
         if outside:
             why.append(f"{outside:,} with covariates outside the surveyed range")
         detail = f": {' and '.join(why)}" if why else ""
@@ -291,7 +291,7 @@ def surface_notes(surface: Any) -> list[str]:
 def blank_reasons(surface: Any, ground: Ground) -> list[str]:
     """Reasons for land being left grey that occur on this map."""
     reasons = []
-    if np.asarray(surface.blank, dtype=bool).any():
+    if (np.asarray(surface.blank, dtype=bool) & ~np.asarray(surface.missing, dtype=bool)).any():
         reasons.append("no people")
     if ground.water:
         reasons.append("excluded area")

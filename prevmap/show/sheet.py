@@ -17,12 +17,12 @@ from prevmap.show.scale_bar import draw_scale_bar
 from prevmap.show.wording import wrapped
 
 # Sizes in inches, chosen so that 8 pt text is readable on a phone that shows one sheet across its width.
-_WIDTH = 5.4
-_MAP_WIDTH = 4.3
-_MAP_HEIGHT = 4.6
+_WIDTH = 4.6
+_MAP_WIDTH = 3.6
+_MAP_HEIGHT = 4.2
 _LEFT = 0.1
 STRIP_IN = 0.42
-_TITLE_PT = 11.0
+_TITLE_PT = 10.5
 _SUBTITLE_PT = 7.8
 _NOTE_PT = 7.4
 _LEADING = 1.32

@@ -128,7 +128,7 @@ def draw_unit_map(
     levels = checked_certainty(
         certainty if certainty is not None else decisions.certainty if decisions is not None else 0.90
     )
-    ground = read_ground(units.region, getattr(units, "sites", None))
+    ground = read_ground(units.region, units.fit.sites)
     sheet = open_sheet(ground.bounds, ax, figure)
     draw_ground(sheet, ground)
     shapes = [thin(geometry, sheet) for geometry in ground.units]
@@ -280,7 +280,5 @@ def _unit_texts(frame: Any, letters: list[str]) -> list[UnitText]:
 
 
 def _subtitle(units: Any) -> str:
-    weight = (
-        "weighted by population" if units.grid.people is not None else "weighted by area: no population given"
-    )
-    return sentence(f"{meaning(units)}; {weight}")
+    weight = "population" if units.weighting == "population" else "area, since no population was given"
+    return sentence(f"{meaning(units.surface)}; weighted by {weight}")

@@ -1,0 +1,156 @@
+"""The first paragraph of the report: what was surveyed and what can be decided, in plain words."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from prevmap.plan.classify import ABOVE, BELOW, UNDECIDED, checked_certainty
+from prevmap.show.wording import NOT_STATED, count, inequality, listed, noted, percent, threshold_text
+
+if TYPE_CHECKING:
+    from prevmap.show.report.content import ReportContent
+
+
+def summary_sentences(content: ReportContent) -> list[str]:
+    """Say in a few sentences what was surveyed, what was found, and how sure it is."""
+    fit = content.fit
+    raw = percent(fit.n_positive / fit.n_examined) if fit.n_examined else "–"
+    sentences = [
+        f"The survey examined {count(fit.n_examined, 'person', 'people')} at {count(fit.n_sites, 'site')}; "
+        f"{fit.n_positive:,} were positive ({raw}, raw)."
+    ]
+    refused = int((fit.findings["severity"] == "error").sum())
+    if refused:
+        sentences.append(
+            f"{count(refused, 'finding')} led to a row or value not being used; all are listed below."
+        )
+    if content.decisions is not None:
+        sentences += _decided(content)
+    elif content.thresholds:
+        sentences += _cells(content)
+    else:
+        sentences.append(
+            "No threshold was set, so nothing is said here about places being above or below one."
+        )
+    return sentences
+
+
+def headline_counts(content: ReportContent) -> list[tuple[str, str, str]]:
+    """Return number, words and class of the boxes at the top; empty without decisions."""
+    if content.decisions is None:
+        return []
+    names = {ABOVE: "above", BELOW: "below", UNDECIDED: "undecided"}
+    edges = content.decisions.thresholds
+    boxes = []
+    for i, (outcome, number) in enumerate(content.decisions.counts.items()):
+        words = f"{outcome} {threshold_text(edges[0])}" if outcome in (ABOVE, BELOW) else inequality(outcome)
+        boxes.append((f"{number:,}", words, names.get(outcome, f"class{i}")))
+    return boxes
+
+
+def survey_facts(content: ReportContent) -> list[tuple[str, str]]:
+    """Pair labels with what was surveyed; unknown is printed as "not stated"."""
+    survey, fit, region = content.survey, content.fit, content.region
+    facts = [(label, noted(survey, field)) for label, field in _FIELDS]
+    facts += [
+        ("Source", str(survey.source or NOT_STATED)),
+        ("Rows read", f"{survey.rows_read:,}"),
+        ("Sites used", f"{fit.n_sites:,}"),
+        ("People examined", f"{fit.n_examined:,}"),
+        ("People positive", f"{fit.n_positive:,}"),
+    ]
+    if len(survey.unplaced):
+        facts.append(
+            ("Rows without a position", f"{len(survey.unplaced):,}, in the raw estimate of their unit only")
+        )
+    if region.has_units:
+        facts.append(("Units", f"{len(region.units):,}, from {region.source}"))
+    else:
+        facts.append(("Study area", "buffered outline of the sites; no unit boundaries were given"))
+    population: Any = getattr(content.surface.grid, "population", None)
+    facts.append(("Population", _population_words(population)))
+    facts.append(("Largest distortion of distances on the map", percent(float(region.distortion))))
+    return facts
+
+
+_FIELDS = (
+    ("Indicator", "indicator"),
+    ("Ages", "ages"),
+    ("Test", "test"),
+    ("Sampling", "sampling"),
+    ("Date", "date"),
+)
+
+
+def _decided(content: ReportContent) -> list[str]:
+    decisions: Any = content.decisions
+    counts: dict[str, int] = decisions.counts
+    total = sum(counts.values())
+    above, below = decisions.certainty["above"], decisions.certainty["below"]
+    sure = (
+        f"{100 * above:.4g} %"
+        if above == below
+        else f"{100 * above:.4g} % (above) or {100 * below:.4g} % (below)"
+    )
+    if len(decisions.thresholds) == 1:
+        edge = threshold_text(decisions.thresholds[0])
+        found = (
+            f"{counts[ABOVE]:,} {_are(counts[ABOVE])} above {edge}, "
+            f"{counts[BELOW]:,} {_are(counts[BELOW])} below, and "
+            f"{counts[UNDECIDED]:,} {_are(counts[UNDECIDED])} undecided"
+        )
+    else:
+        found = listed([f"{n:,} {_are(n)} {inequality(outcome)}" for outcome, n in counts.items()])
+    sentences = [f"Of {count(total, 'unit')}, {found}, at a certainty of at least {sure}."]
+    decided = total - counts[UNDECIDED]
+    if decided:
+        wrong = f"{decisions.expected_wrong:.1f}"
+        sentences.append(
+            f"Of the {decided:,} decided, {wrong} can be expected to be wrong if the model holds."
+        )
+    bare = int(((decisions.frame["decision"] == UNDECIDED) & (decisions.frame["basis"] != "own sites")).sum())
+    if bare:
+        sentences.append(
+            f"{count(bare, 'undecided unit')} {_have(bare)} no surveyed site; "
+            "the probability shown for such a unit is borrowed from elsewhere."
+        )
+    return sentences
+
+
+def _cells(content: ReportContent) -> list[str]:
+    """Count mapped cells that are sure to be above or below each threshold."""
+    surface = content.surface
+    levels = checked_certainty(content.certainty)
+    shown = ~(np.asarray(surface.blank, dtype=bool) | np.asarray(surface.missing, dtype=bool))
+    sentences = []
+    for threshold in content.thresholds:
+        p = np.asarray(surface.exceedance(threshold), dtype=float)[shown]
+        high, low = int((p >= levels["above"]).sum()), int((p <= 1.0 - levels["below"]).sum())
+        sure = f"{100 * levels['above']:.4g} %"
+        if levels["above"] != levels["below"]:
+            sure += f" (above) or {100 * levels['below']:.4g} % (below)"
+        sentences.append(
+            f"Of {count(len(p), 'mapped cell')}, {high:,} {_are(high)} above {threshold_text(threshold)} and "
+            f"{low:,} {_are(low)} below with a probability of at least {sure}; "
+            f"the other {len(p) - high - low:,} are undecided."
+        )
+    return sentences
+
+
+def _population_words(population: Any) -> str:
+    if population is None:
+        return "not given: units are weighted by area, and no land is left blank for being empty"
+    name = str(population.path).replace("\\", "/").rsplit("/", 1)[-1]
+    ages = "–".join(f"{age:g}" for age in population.ages) if population.ages else NOT_STATED
+    year = str(population.year) if population.year else NOT_STATED
+    return f"{name}; ages {ages}; year {year}"
+
+
+def _are(number: int) -> str:
+    return "is" if number == 1 else "are"
+
+
+def _have(number: int) -> str:
+    return "has" if number == 1 else "have"

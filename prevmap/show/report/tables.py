@@ -1,0 +1,224 @@
+"""The tables of the report as printed cells: findings, coefficients, hyperparameters, units."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import pandas as pd
+
+from prevmap.plan.classify import ABOVE, BELOW, UNDECIDED
+from prevmap.show.palette import decision_styles
+from prevmap.show.wording import inequality, percent, probability, significant, threshold_text
+
+if TYPE_CHECKING:
+    from prevmap.show.report.content import ReportContent
+
+_SEVERITIES = (
+    ("error", "Not used", "these rows or values did not enter the estimates"),
+    ("warning", "Used, but doubtful", "these rows entered the estimates and deserve a look"),
+    ("note", "Notes", "nothing to do, good to know"),
+)
+_MOST_ROWS = 200
+
+
+@dataclass(frozen=True, slots=True)
+class Table:
+    """Printed cells with their headings.
+
+    Attributes
+    ----------
+    heads : tuple of str
+        Column headings.
+    rows : tuple of tuple of str
+        Cells in the order of the headings; the first cell names the row.
+    numeric : frozenset of int
+        Columns that are set flush right.
+    marks : tuple of str
+        One class per row (the decision), for the colour of its edge; empty where there is none.
+    """
+
+    heads: tuple[str, ...]
+    rows: tuple[tuple[str, ...], ...]
+    numeric: frozenset[int] = frozenset()
+    marks: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class FindingGroup:
+    """Findings of one severity; ``more`` are left to the file of findings."""
+
+    title: str
+    meaning: str
+    table: Table
+    total: int
+    more: int
+
+
+def finding_groups(findings: pd.DataFrame) -> list[FindingGroup]:
+    """Group findings by severity, worst first."""
+    groups = []
+    for severity, title, meaning in _SEVERITIES:
+        mine = findings[findings["severity"] == severity]
+        if mine.empty:
+            continue
+        rows = tuple(
+            (_cell(f.row), _cell(f.site), _cell(f.field), _cell(f.what), _cell(f.action))
+            for f in mine.head(_MOST_ROWS).itertuples()
+        )
+        table = Table(("row", "site", "field", "what was found", "what was done"), rows)
+        groups.append(FindingGroup(title, meaning, table, len(mine), max(0, len(mine) - _MOST_ROWS)))
+    return groups
+
+
+def coefficient_table(coefficients: pd.DataFrame) -> Table:
+    """Print coefficients on the logit scale and as odds ratios (the intercept as prevalence)."""
+    rows = []
+    for term, row in coefficients.iterrows():
+        low, middle, high = (float(row[c]) for c in ("lower95", "median", "upper95"))
+        if term == "intercept":
+            other = (
+                f"prevalence {percent(_expit(middle))} ({percent(_expit(low))} to {percent(_expit(high))})"
+            )
+        else:
+            odds = [significant(math.exp(v)) for v in (middle, low, high)]
+            other = f"{odds[0]} ({odds[1]} to {odds[2]})"
+        rows.append(
+            (
+                str(term),
+                _signed(middle),
+                f"{_signed(low)} to {_signed(high)}",
+                significant(row["sd"], 2),
+                other,
+            )
+        )
+    heads = ("term", "median (logit)", "95 % interval (logit)", "sd", "odds ratio (95 % interval)")
+    return Table(heads, tuple(rows), frozenset({1, 2, 3, 4}))
+
+
+_HYPERPARAMETERS: Mapping[str, str] = {
+    "range_km": "range, km",
+    "sd": "sd of the surface",
+    "nugget_sd": "sd of the nugget",
+}
+
+
+def hyperparameter_table(hyperparameters: pd.DataFrame) -> Table:
+    """Print median, limits and mode of range, sd and nugget."""
+    rows = tuple(
+        (
+            _HYPERPARAMETERS.get(str(name), str(name)),
+            significant(float(row["median"])),
+            f"{significant(float(row['lower95']))} to {significant(float(row['upper95']))}",
+            significant(float(row["at_mode"])),
+        )
+        for name, row in hyperparameters.iterrows()
+    )
+    return Table(("hyperparameter", "median", "95 % interval", "at the mode"), rows, frozenset({1, 2, 3}))
+
+
+def unit_table(content: ReportContent) -> Table | None:
+    """Print one row per unit, undecided ones first, then the rest from high to low."""
+    if content.units is None:
+        return None
+    frame = content.units.frame.reset_index(drop=True)
+    decisions = content.decisions
+    outcome = (
+        decisions.frame["decision"].astype(str).to_list() if decisions is not None else [""] * len(frame)
+    )
+    order = _unit_order(frame, outcome)
+    parents = "parent" in frame and frame["parent"].notna().any()
+    people = "population" in frame and frame["population"].notna().any()
+    infected = "infected_mean" in frame and frame["infected_mean"].notna().any()
+    above = {
+        t: content.units.exceedance(t).loc[frame["unit"].to_list()].to_list() for t in content.thresholds
+    }
+
+    heads = [
+        "unit",
+        "no.",
+        *(["part of"] if parents else []),
+        "sites",
+        "examined",
+        "positive",
+        "raw (95 % interval)",
+    ]
+    heads += ["modelled mean (95 % interval)", *(f"P(above {threshold_text(t)})" for t in content.thresholds)]
+    heads += [*(["decision"] if decisions is not None else []), "basis"]
+    heads += [*(["people"] if people else []), *(["infected (95 % interval)"] if infected else [])]
+    left = {"unit", "part of", "decision", "basis"}
+    rows = []
+    for i in order:
+        unit = frame.iloc[i]
+        cells = [_cell(unit["unit"]), str(i + 1), *([_cell(unit["parent"])] if parents else [])]
+        cells += [_whole(unit["sites"]), _whole(unit["examined"]), _whole(unit["positive"])]
+        cells.append(_interval(unit, "direct_estimate", "direct_lower95", "direct_upper95"))
+        cells.append(_interval(unit, "mean", "lower95", "upper95"))
+        cells += [probability(float(above[t][i])) for t in content.thresholds]
+        cells += [*([inequality(outcome[i])] if decisions is not None else []), _cell(unit["basis"])]
+        cells += [_whole(unit["population"])] if people else []
+        if infected:
+            low, high = _whole(unit["infected_lower95"]), _whole(unit["infected_upper95"])
+            cells.append(f"{_whole(unit['infected_mean'])} ({low} to {high})" if low != "–" else "–")
+        rows.append(tuple(cells))
+    numeric = frozenset(i for i, head in enumerate(heads) if head not in left)
+    marks: tuple[str, ...] = ()
+    if decisions is not None:
+        place = {name: k for k, name in enumerate(decision_styles(decisions.outcomes))}
+        marks = tuple(
+            outcome[i] if outcome[i] in (ABOVE, BELOW, UNDECIDED) else f"class{place[outcome[i]]}"
+            for i in order
+        )
+    return Table(tuple(heads), tuple(rows), numeric, marks)
+
+
+def input_table(inputs: Mapping[str, Any]) -> Table:
+    """Print every input file with its SHA-256."""
+    rows = tuple(
+        (str(key), str(entry.get("file", "")), str(entry.get("sha256", "")))
+        if isinstance(entry, Mapping)
+        else (str(key), "", str(entry))
+        for key, entry in inputs.items()
+    )
+    return Table(("input", "file", "SHA-256"), rows)
+
+
+def _unit_order(frame: pd.DataFrame, outcome: Sequence[str]) -> list[int]:
+    mean = frame["mean"].to_list()
+
+    def rank(i: int) -> tuple[bool, float, int]:
+        height = -mean[i] if math.isfinite(mean[i]) else math.inf
+        return (outcome[i] not in ("", UNDECIDED), height, i)
+
+    return sorted(range(len(frame)), key=rank)
+
+
+def _interval(row: Any, centre: str, lower: str, upper: str) -> str:
+    values = [float(row[name]) for name in (centre, lower, upper)]
+    if not math.isfinite(values[0]):
+        return "–"
+    middle, low, high = (percent(v).replace("\u00a0%", "") for v in values)
+    return f"{middle}\u00a0% ({low} to {high})"
+
+
+def _signed(value: float) -> str:
+    return f"{value:+.3f}".replace("-", "−")
+
+
+def _expit(value: float) -> float:
+    return 1.0 / (1.0 + math.exp(-value)) if value > -700.0 else 0.0
+
+
+def _whole(value: Any) -> str:
+    number = float(value)
+    return f"{number:,.0f}" if math.isfinite(number) else "–"
+
+
+def _cell(value: Any) -> str:
+    if value is None or value is pd.NA or (isinstance(value, float) and math.isnan(value)):
+        return "–"
+    if isinstance(value, float) and value.is_integer():
+        return f"{value:.0f}"
+    return str(value)
