@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import contextlib
-from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -12,6 +12,7 @@ import pandas as pd
 
 from prevmap.errors import InputError
 from prevmap.inputs.covariates import ColumnCovariate, DistanceCovariate, FactorCovariate, RasterCovariate
+from prevmap.inputs.findings import findings_frame
 from prevmap.inputs.grid import Grid
 from prevmap.inputs.population import Population, read_population
 from prevmap.inputs.region import Region, hull_region, read_region
@@ -27,7 +28,7 @@ from prevmap.study.progress import Stages, kept_warnings
 from prevmap.study.record import input_hashes
 from prevmap.study.schema import Study
 from prevmap.study.settings import CovariateSettings
-from prevmap.study.writing import write_results
+from prevmap.study.writing import unit_table, write_results
 
 Covariate = RasterCovariate | DistanceCovariate | ColumnCovariate | FactorCovariate
 
@@ -41,6 +42,11 @@ class StudyInputs:
     population: Population | None
     covariates: tuple[Covariate, ...]
     grid: Grid
+
+    @property
+    def grid_findings(self) -> list[pd.DataFrame]:
+        """Findings of the population and the grid, which a fit does not know of."""
+        return [*([] if self.population is None else [self.population.findings]), self.grid.findings]
 
 
 @dataclass(frozen=True, slots=True)
@@ -78,6 +84,14 @@ class StudyResult:
     unit_table: pd.DataFrame | None
     record: Mapping[str, Any]
     folder: Path
+
+
+def joined_findings(tables: Sequence[pd.DataFrame]) -> pd.DataFrame:
+    """Return all findings in one table, each once."""
+    filled = [table for table in tables if len(table)]
+    if not filled:
+        return findings_frame([])
+    return pd.concat(filled, ignore_index=True).drop_duplicates(ignore_index=True)
 
 
 @contextlib.contextmanager
@@ -178,23 +192,19 @@ def _covariate(settings: CovariateSettings) -> Covariate:
     if settings.distance_to is not None:
         return DistanceCovariate(settings.distance_to, name=name, transform=transform, scale=scale)
     if settings.column is not None:
-        return ColumnCovariate(settings.column, at=settings.at, name=name, transform=transform, scale=scale)
-    return FactorCovariate(str(settings.factor), at=settings.at, name=name)
+        at = None if settings.at is None else float(settings.at)
+        return ColumnCovariate(settings.column, at=at, name=name, transform=transform, scale=scale)
+    level = None if settings.at is None else str(settings.at)
+    return FactorCovariate(str(settings.factor), at=level, name=name)
 
 
 def build_model(study: Study, covariates: tuple[Covariate, ...]) -> PrevalenceModel:
     """Return the model of a study; what the study leaves out keeps the model's own default."""
-    mesh = {
-        name: value
-        for name, value in (
-            ("edge_km", study.model.mesh_edge_km),
-            ("margin_km", study.model.margin_km),
-            ("max_nodes", study.model.max_nodes),
-        )
-        if value is not None
-    }
+    spec = MeshSpec(edge_km=study.model.mesh_edge_km, margin_km=study.model.margin_km)
+    if study.model.max_nodes is not None:
+        spec = replace(spec, max_nodes=study.model.max_nodes)
     prior = study.prior
-    given = {
+    given: dict[str, Any] = {
         name: _prior(value)
         for name, value in (("range_km", prior.range_km), ("sd", prior.sd), ("nugget_sd", prior.nugget_sd))
         if value is not None
@@ -209,7 +219,7 @@ def build_model(study: Study, covariates: tuple[Covariate, ...]) -> PrevalenceMo
     }
     return PrevalenceModel(
         list(covariates),
-        mesh=MeshSpec(**mesh),
+        mesh=spec,
         priors=Priors(**given),
         tests=tests or None,
         nu=study.model.nu,
@@ -227,12 +237,12 @@ def run_study(study: Study, *, progress: bool, output: Path | None) -> StudyResu
     """Run every stage and move the results into place; see :meth:`Study.run`."""
     folder = (study.output.folder if output is None else output).resolve()
     check_output(folder, study.input_files())
-    stages = Stages(7, progress)
+    stages = Stages(8 if study.region is not None else 7, progress)
     with kept_warnings() as kept:
         hashes = input_hashes(study)
         inputs = read_inputs(study, stages)
         model = build_model(study, inputs.covariates)
-        with stages.stage("fit", f"Fitting the model with the {study.model.engine} engine"):
+        with stages.stage("fit", f"Fitting the model ({study.model.engine} engine)"):
             fit = model.fit(
                 inputs.survey,
                 region=inputs.region,
@@ -241,10 +251,10 @@ def run_study(study: Study, *, progress: bool, output: Path | None) -> StudyResu
                 progress=progress,
                 seed=study.model.seed,
             )
-        with stages.stage("surface", f"Predicting {len(inputs.grid.cell)} cells"):
+            fit = replace(fit, findings=joined_findings([fit.findings, *inputs.grid_findings]))
+        with stages.stage("surface", f"Predicting {len(inputs.grid):,} cells"):
             surface = fit.predict(inputs.grid, nugget=study.model.nugget)
-        with stages.stage("units", f"Estimating {len(inputs.region.units)} units"):
-            units, decisions = _decide(study, inputs, fit)
+        units, decisions = _decide(study, inputs, fit, stages)
         thresholds = () if study.decision is None else study.decision.thresholds
         result = StudyResult(
             survey=inputs.survey,
@@ -257,24 +267,29 @@ def run_study(study: Study, *, progress: bool, output: Path | None) -> StudyResu
             units=units,
             decisions=decisions,
             thresholds=thresholds,
-            unit_table=None,
+            unit_table=None if units is None else unit_table(units, decisions, thresholds),
             record={},
             folder=folder,
         )
         with replacing(folder) as fresh:
-            return write_results(study, result, fresh, hashes=hashes, stages=stages, kept=kept)
+            record = write_results(study, result, fresh, inputs=hashes, stages=stages, logged=kept.texts)
+    return replace(result, record=record)
 
 
-def _decide(study: Study, inputs: StudyInputs, fit: Fit) -> tuple[UnitEstimates | None, UnitDecisions | None]:
+def _decide(
+    study: Study, inputs: StudyInputs, fit: Fit, stages: Stages
+) -> tuple[UnitEstimates | None, UnitDecisions | None]:
     if not inputs.region.has_units:
         return None, None
-    units = fit.units(inputs.grid, seed=study.model.seed, draws=study.model.draws, nugget=study.model.nugget)
-    if study.decision is None:
-        return units, None
-    decisions = classify_units(
-        units,
-        list(study.decision.thresholds),
-        study.decision.certainty,
-        decide_without_sites=study.decision.decide_without_sites,
-    )
-    return units, decisions
+    with stages.stage("units", f"Estimating {len(inputs.region.units):,} units"):
+        seed, draws, nugget = study.model.seed, study.model.draws, study.model.nugget
+        units = fit.units(inputs.grid, seed=seed, draws=draws, nugget=nugget)
+        if study.decision is None:
+            return units, None
+        decisions = classify_units(
+            units,
+            list(study.decision.thresholds),
+            study.decision.certainty,
+            decide_without_sites=study.decision.decide_without_sites,
+        )
+    return decisions.units, decisions  # with as many draws as the decisions needed

@@ -8,7 +8,7 @@ from pathlib import Path
 import prevmap
 from prevmap.errors import InputError
 
-_NOT_COPIED = {"truth", "make_demo.py", "__pycache__", "CHECKSUMS.txt"}
+_NOT_COPIED = {"truth", "__pycache__", "SHA256SUMS"}
 
 
 def demo_folder() -> Path:
@@ -45,7 +45,9 @@ def copy_demo(folder: Path) -> Path:
     files = [
         path.relative_to(source)
         for path in sorted(source.rglob("*"))
-        if path.is_file() and not _NOT_COPIED.intersection(path.relative_to(source).parts)
+        if path.is_file()
+        and path.suffix != ".py"
+        and not _NOT_COPIED.intersection(path.relative_to(source).parts)
     ]
     if folder.exists() and any(folder.iterdir()):
         for file in files:

@@ -7,11 +7,19 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
+from geopandas import GeoDataFrame
 
-from prevmap.inputs.covariates import design
+from prevmap.errors import InputError
+from prevmap.inputs.design import design
 from prevmap.inputs.findings import findings_frame
-from prevmap.study.chain import StudyInputs, build_model, naming, read_inputs
-from prevmap.study.progress import Stages
+from prevmap.inputs.placement import assign_units, assign_unplaced, site_findings
+from prevmap.model import meshing
+from prevmap.model.fit import _default_margin as default_margin_km
+from prevmap.model.prior import resolve_priors
+from prevmap.model.rows import row_accuracy
+from prevmap.model.spec import PrevalenceModel
+from prevmap.study.chain import StudyInputs, build_model, joined_findings, naming, read_inputs
+from prevmap.study.progress import Stages, kept_warnings
 from prevmap.study.schema import Study
 
 _WIDTHS = {"severity": 8, "row": 6, "site": 16, "field": 14, "what": 52, "action": 34}
@@ -56,3 +64,100 @@ def findings_lines(findings: pd.DataFrame) -> list[str]:
             ]
             lines.append("  ".join(parts).rstrip())
     return lines
+
+
+def inspect_study(study: Study) -> Inspection:
+    """Read and check everything, at the sites and on the grid; see :meth:`Study.inspect`."""
+    with kept_warnings():
+        inputs = read_inputs(study, Stages(3, shown=False))
+    model = build_model(study, inputs.covariates)
+    survey, region, grid = inputs.survey, inputs.region, inputs.grid
+    if not len(survey.frame):
+        raise InputError(f"{study.path.name}: [survey] no row has a position: no model can be fitted")
+    of_range = resolve_priors(model.priors, meshing.diagonal_km(region.boundary))[0]
+    margin_km = model.mesh.margin_km or default_margin_km(of_range)
+    near, findings = site_findings(survey.frame, region, margin_km)
+    with naming(study, "[survey]"):
+        if not near.any():
+            raise InputError("no site lies in or near the study area: check the coordinates of both")
+    findings += assign_units(survey, region)[1] + assign_unplaced(survey, region)[1]
+    frame = survey.frame[near]
+    with naming(study, "[[covariate]]"):
+        designed = design(model.covariates, frame, frame["site"])
+        matrix = designed.matrix(grid.frame_points(), grid=True)
+    frame = frame[designed.kept]
+    with naming(study, "[tests]"):
+        row_accuracy(survey, np.isin(survey.frame.index, frame.index), model.tests)
+    lines = [
+        f"Study file: {study.path}",
+        f"Survey: {survey.rows_read:,} rows read, {len(survey.frame):,} accepted, "
+        f"{len(survey.unplaced):,} without a position; a fit would use {len(frame):,} rows: "
+        f"{frame['examined'].sum():,} examined, {frame['positive'].sum():,} positive",
+        f"Study area: {_area(inputs)}",
+        f"Grid: {len(grid):,} cells of {grid.cell_km:.4g} km"
+        + ("" if grid.people is None else f"; {grid.people.sum():,.0f} people in them"),
+        *_covariate_lines(designed.terms, matrix),
+        _engine_line(study, inputs, model, frame, of_range.middle, margin_km),
+        f"Prevalence: nugget {study.model.nugget}; {study.model.draws:,} draws; seed {study.model.seed}",
+        _decision_line(study, inputs),
+        f"Results would go to {study.output.folder}",
+    ]
+    tables = [
+        survey.findings,
+        region.findings,
+        designed.findings,
+        *inputs.grid_findings,
+        findings_frame(findings),
+    ]
+    return Inspection(tuple(lines), joined_findings(tables))
+
+
+def _area(inputs: StudyInputs) -> str:
+    region = inputs.region
+    km2 = region.boundary.area / 1e6
+    extent = f"{km2:,.0f} km², working coordinate system {region.crs.name}"
+    distortion = f"largest distortion of distances {100 * region.distortion:.2g} %"
+    if not region.has_units:
+        return f"buffered hull of the sites, {extent}, {distortion}"
+    return f"{len(region.units):,} units, {extent}, {distortion}"
+
+
+def _covariate_lines(terms: tuple[str, ...], matrix: tuple[np.ndarray, np.ndarray, np.ndarray]) -> list[str]:
+    """Say what the covariates do on the grid; `matrix` is values, outside, missing by cell."""
+    if len(terms) == 1:
+        return ["Covariates: none"]
+    _, outside, missing = matrix
+    return [
+        f"Covariates: {', '.join(terms[1:])}; on the grid {outside.sum():,} cells lie outside the sampled "
+        f"range and {missing.sum():,} have no value"
+    ]
+
+
+def _engine_line(
+    study: Study,
+    inputs: StudyInputs,
+    model: PrevalenceModel,
+    frame: GeoDataFrame,
+    range_km: float,
+    margin_km: float,
+) -> str:
+    sites = frame["site"].nunique()
+    if study.model.engine == "exact":
+        return f"Fit: exact engine, {sites:,} sites, nu = {model.nu:g}"
+    xy_km = inputs.region.project(frame.geometry)
+    zone = meshing.inner_zone_km(inputs.region.boundary, xy_km)
+    spacing = meshing.site_spacing_km(xy_km)
+    edge = model.mesh.edge_km or meshing.default_edge_km(zone, range_km, spacing)
+    with naming(study, "[model]"):
+        nodes = meshing.mesh_over(zone, edge, margin_km, model.mesh.max_nodes).nodes
+    origin = "as stated" if model.mesh.edge_km else "by default; a fit may refine it once"
+    mesh = f"mesh of {nodes:,} nodes, edge {edge:.3g} km {origin}, margin {margin_km:.3g} km"
+    return f"Fit: {sites:,} sites, {mesh}"
+
+
+def _decision_line(study: Study, inputs: StudyInputs) -> str:
+    if study.decision is None:
+        return "Decision: no threshold, so no exceedance map and no decisions"
+    stated = ", ".join(f"{100 * threshold:g} %" for threshold in study.decision.thresholds)
+    what = "units" if inputs.region.has_units else "cells only: there are no units"
+    return f"Decision: above or below {stated} with certainty {study.decision.certainty}, {what}"

@@ -170,7 +170,7 @@ def make_record(
     """
     fit = result.fit
     resolved = {
-        "working_crs": result.region.crs.to_string(),
+        "working_crs": result.region.crs.to_wkt(),
         "largest_distance_distortion": result.region.distortion,
         "cell_km": result.grid.cell_m / 1000,
         "grid_shape": result.grid.shape,

@@ -245,6 +245,10 @@ def _covariates(tables: list[Mapping[str, Any]], here: Place) -> tuple[Covariate
                 f'{place} the key "at" is missing; accepted: the number or level of '
                 f'"{table[sources[0]]}" that the maps are made for'
             )
+        if sources[0] == "column" and isinstance(covariate.at, str):
+            place.at("at").refuse(
+                covariate.at, f'a number; for the levels of a text column use factor = "{table["column"]}"'
+            )
         found.append(covariate)
     return tuple(found)
 

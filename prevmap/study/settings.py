@@ -6,11 +6,13 @@ import dataclasses
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Annotated, Any, get_type_hints
+from typing import Annotated, Any, Literal, get_type_hints
 
 from prevmap.errors import InputError
 from prevmap.study import checks
 from prevmap.study.checks import Place, TailPrior
+
+Transform = Literal["log", "log1p", "sqrt", "square"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,7 +49,7 @@ class CovariateSettings:
     distance_to: Annotated[Path | None, checks.existing_file] = None
     column: Annotated[str | None, checks.text] = None
     factor: Annotated[str | None, checks.text] = None
-    transform: Annotated[str | None, checks.text] = None
+    transform: Annotated[Transform | None, checks.choice("log", "log1p", "sqrt", "square")] = None
     scale: Annotated[bool, checks.flag] = True
     at: Annotated[float | str | None, checks.level] = None
 
@@ -69,7 +71,7 @@ class PopulationSettings:
     """[population]: a raster of people."""
 
     raster: Annotated[Path, checks.existing_file]
-    kind: Annotated[str, checks.choice("counts", "density")] = "counts"
+    kind: Annotated[Literal["counts", "density"], checks.choice("counts", "density")] = "counts"
     ages: Annotated[tuple[int, int] | None, checks.age_range] = None
     year: Annotated[int | None, checks.whole(least=1)] = None
     unit_total: Annotated[str | Mapping[str, float] | None, checks.totals] = None
@@ -89,10 +91,12 @@ class ModelSettings:
 
     mesh_edge_km: Annotated[float | None, checks.number(above=0, unit="in kilometres")] = None
     margin_km: Annotated[float | None, checks.number(above=0, unit="in kilometres")] = None
-    max_nodes: Annotated[int | None, checks.whole(least=100)] = None
-    engine: Annotated[str, checks.choice("mesh", "exact")] = "mesh"
+    max_nodes: Annotated[int | None, checks.whole(least=10)] = None
+    engine: Annotated[Literal["mesh", "exact"], checks.choice("mesh", "exact")] = "mesh"
     integrate: Annotated[bool, checks.flag] = True
-    nugget: Annotated[str, checks.choice("average", "omit", "draw")] = "average"
+    nugget: Annotated[Literal["average", "omit", "draw"], checks.choice("average", "omit", "draw")] = (
+        "average"
+    )
     nu: Annotated[float, checks.choice(0.5, 1.0, 1.5, 2.5)] = 1.0
     seed: Annotated[int, checks.whole(least=0)] = 1
     draws: Annotated[int, checks.whole(least=100)] = 4000

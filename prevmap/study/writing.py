@@ -2,16 +2,28 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from dataclasses import asdict, replace
 from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 import geopandas
 import pandas as pd
 
 from prevmap.inputs.survey import Survey
+from prevmap.model.fit import Fit
 from prevmap.model.units import UnitEstimates
 from prevmap.plan.classify import UnitDecisions
-from prevmap.study.outputs import settle_geopackage, write_csv
+from prevmap.show.report import ReportContent, ReportFigure, render_report
+from prevmap.study.figures import write_figures
+from prevmap.study.outputs import settle_geopackage, sha256, write_csv
+from prevmap.study.progress import Stages
+from prevmap.study.record import environment, make_record, write_record
+from prevmap.study.schema import Study
+from prevmap.study.sharing import shareable_fit, shared_square_m
+
+if TYPE_CHECKING:
+    from prevmap.study.chain import StudyResult
 
 
 def unit_table(
@@ -33,8 +45,8 @@ def unit_table(
     """
     table = pd.DataFrame(units.frame.drop(columns="geometry", errors="ignore")).reset_index(drop=True)
     for threshold in thresholds:
-        table[f"exceedance_{threshold:g}"] = units.exceedance(threshold).to_numpy()
-        table[f"exceedance_{threshold:g}_error"] = units.exceedance_error(threshold).to_numpy()
+        for column in (units.exceedance(threshold), units.exceedance_error(threshold)):
+            table[column.name] = column.to_numpy()
     if decisions is not None:
         decided = decisions.frame.reset_index(drop=True)
         decided = decided.rename(columns={"monte_carlo_error": "decision_monte_carlo_error"})
@@ -84,7 +96,78 @@ def _free_name(name: str, taken: pd.Index) -> str:
     return name
 
 
-def write_tables(survey: Survey, findings: pd.DataFrame, internal: Path) -> None:
-    """Write what holds exact positions: the sites as checked, and everything found."""
-    write_csv(checked_sites(survey), internal / "sites_checked.csv")
-    write_csv(findings, internal / "findings.csv")
+def write_results(
+    study: Study,
+    result: StudyResult,
+    fresh: Path,
+    *,
+    inputs: Mapping[str, Any],
+    stages: Stages,
+    logged: list[str],
+) -> dict[str, Any]:
+    """Write everything into an empty folder and return the record.
+
+    Parameters
+    ----------
+    study : Study
+    result : StudyResult
+        Complete but for its record.
+    fresh : Path
+        Where to write; becomes ``result.folder``.
+    inputs : mapping
+        From ``input_hashes``, taken before the inputs were read.
+    stages : Stages
+    logged : list of str
+        Warnings from the log.
+    """
+    share, internal = fresh / "share", fresh / "internal"
+    for folder in (share / "figures", internal):
+        folder.mkdir(parents=True)
+    fit = shareable_fit(result)
+    with stages.stage("figures", "Drawing the figures"):
+        figures = write_figures(study, result, fit, shared_square_m(result), share / "figures")
+    with stages.stage("files", "Writing the results"):
+        known = {"inputs": inputs, "environment": environment(), "seed": study.model.seed}
+        report = _report(study, result, fit, figures, known)
+        (share / "report.html").write_text(report, encoding="utf-8", newline="\n")
+        result.surface.to_geotiff(share / "prevalence.tif", thresholds=result.thresholds)
+        if result.units is not None and result.unit_table is not None:
+            write_csv(result.unit_table, share / "units.csv")
+            write_unit_layer(result.unit_table, result.units, share / "units.gpkg")
+        write_csv(checked_sites(result.survey), internal / "sites_checked.csv")
+        write_csv(result.fit.findings, internal / "findings.csv")
+    written = sorted(path for path in fresh.rglob("*") if path.is_file())
+    record = make_record(
+        study,
+        result,
+        inputs=inputs,
+        outputs={path.relative_to(fresh).as_posix(): sha256(path) for path in written},
+        folder=result.folder,
+        seconds=stages.seconds,
+        warnings=list(dict.fromkeys([*result.fit.warnings, *logged])),
+    )
+    write_record(record, internal / "record.json")
+    return record
+
+
+def _report(
+    study: Study, result: StudyResult, fit: Fit, figures: Mapping[str, ReportFigure], known: Mapping[str, Any]
+) -> str:
+    statements = {name: text for name, text in asdict(study.report).items() if text is not None}
+    title = statements.pop("title", None) or result.survey.about.indicator or study.path.stem
+    return render_report(
+        ReportContent(
+            title=str(title),
+            survey=result.survey,
+            region=result.region,
+            fit=fit,
+            surface=replace(result.surface, fit=fit),
+            units=result.units,
+            decisions=result.decisions,
+            thresholds=result.thresholds,
+            figures=figures,
+            record={**known, "study": study.path.name, "command": f"prevmap run {study.path.name}"},
+            statements=statements,
+            certainty=0.90 if study.decision is None else study.decision.certainty,
+        )
+    )
