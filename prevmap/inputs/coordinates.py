@@ -16,7 +16,15 @@ from pyproj.exceptions import CRSError
 
 from prevmap.errors import InputError
 from prevmap.inputs.findings import Remark
-from prevmap.inputs.reading import Reading, cell_text, is_decimal_comma, is_missing, plain, read_number
+from prevmap.inputs.reading import (
+    Reading,
+    cell_text,
+    is_decimal_comma,
+    is_missing,
+    plain,
+    quoted,
+    read_number,
+)
 
 Axis = Literal["lon", "lat"]
 
@@ -93,7 +101,7 @@ def read_degrees(value: object, axis: Axis, decimal: str | None = None) -> tuple
         return simple, False
     match = _SYMBOLS.fullmatch(text) or _LETTERS.fullmatch(text)
     if match is None:
-        return Reading(problem=f"{value!r} is not a coordinate"), False
+        return Reading(problem=f"{quoted(value)} is not a coordinate"), False
     return _from_parts(match, value, axis), True
 
 
@@ -146,7 +154,7 @@ def read_positions(
     for at in map(int, np.flatnonzero(absent[:, 0] != absent[:, 1])):
         field, given = fields if absent[at, 0] else fields[::-1]
         cell = first[at] if given == fields[0] else second[at]
-        what = f"{field} is missing, {given} is {cell_text(cell)!r}"
+        what = f"{field} is missing, {given} is {quoted(cell)}"
         remarks.append(Remark(at, field, "error", what, "row not used: no position"))
     values[np.isnan(values).any(axis=1)] = np.nan
     return Positions(values, np.asarray(absent.all(axis=1)), remarks, sign)
@@ -218,27 +226,27 @@ def _from_parts(match: re.Match[str], value: str, axis: Axis) -> Reading:
     letters = [letter.upper() for letter in (found["first"], found["last"]) if letter]
     numbers = [found[name].replace(",", ".") for name in ("d", "m", "s") if found[name] is not None]
     if len(letters) > 1 or (letters and found["sign"]):
-        return Reading(problem=f"{value!r} gives its hemisphere twice")
+        return Reading(problem=f"{quoted(value)} gives its hemisphere twice")
     if letters == ["O"]:
         return Reading(
-            problem=f"{value!r} has the hemisphere O, which is east or west by language: write E or W"
+            problem=f"{quoted(value)} has the hemisphere O, which is east or west by language: write E or W"
         )
     if letters and letters[0] not in ("EW" if axis == "lon" else "NS"):
         names = ("longitude", "latitude") if axis == "lon" else ("latitude", "longitude")
         return Reading(
-            problem=f"{value!r} is a {names[1]} where a {names[0]} is expected: are the two exchanged?"
+            problem=f"{quoted(value)} is a {names[1]} where a {names[0]} is expected: are the two exchanged?"
         )
     # "36 49" may be 36.49 with a lost point; three numbers, a mark or a letter leave one reading only.
     marked = letters or len(numbers) == 3 or (found.get("d_mark") or "d").strip()
     if len(numbers) == 2 and not marked:
         return Reading(
-            problem=f"{value!r} can be read in two ways: mark degrees and minutes, or write one number"
+            problem=f"{quoted(value)} can be read in two ways: mark degrees and minutes, or write one number"
         )
     if any("." in number for number in numbers[:-1]):
-        return Reading(problem=f"{value!r} has decimals before its last part")
+        return Reading(problem=f"{quoted(value)} has decimals before its last part")
     parts = [float(number) for number in numbers]
     if any(part >= 60.0 for part in parts[1:]):
-        return Reading(problem=f"{value!r} has 60 minutes or seconds or more")
+        return Reading(problem=f"{quoted(value)} has 60 minutes or seconds or more")
     degrees = sum(part * unit for part, unit in zip(parts, (3600.0, 60.0, 1.0), strict=False)) / 3600.0
     return Reading(-degrees if found["sign"] == "-" or letters in (["S"], ["W"]) else degrees)
 
@@ -258,12 +266,12 @@ def _parts_remarks(
     parts: list[int], cells: Sequence[object], values: NDArray[np.float64], field: str
 ) -> list[Remark]:
     """Note converted cells one by one where they are the exception, once where they are the rule."""
-    texts = [f"{cell_text(cells[at])!r} is in degrees, minutes or with a hemisphere" for at in parts]
+    texts = [f"{quoted(cell_text(cells[at]))} is in degrees, minutes or with a hemisphere" for at in parts]
     reads = [f"read as {values[at]:.6f} degrees" for at in parts]
     if len(parts) <= max(10, len(cells) // 10):
         return [
             Remark(at, field, "note", text, read) for at, text, read in zip(parts, texts, reads, strict=True)
         ]
     first = cell_text(cells[parts[0]])
-    what = f"{len(parts)} cells are in degrees, minutes or with a hemisphere, e.g. {first!r}"
+    what = f"{len(parts)} cells are in degrees, minutes or with a hemisphere, e.g. {quoted(first)}"
     return [Remark(None, field, "note", what, f"converted to degrees, that one {reads[0]}")]

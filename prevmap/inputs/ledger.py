@@ -211,7 +211,7 @@ def _positions(
         return system, read, fields
     if table.geometry is None:
         raise InputError(
-            f"{table.label}: give the columns of the coordinates: lon= and lat=, or x=, y= and crs=."
+            f"{table.label}: name the columns of coordinates: lon= and lat=, or x=, y= and crs=."
         )
     system = geometry_crs(table.geometry, crs, table.label)
     fields = ("lon", "lat") if system.is_geographic else ("x", "y")

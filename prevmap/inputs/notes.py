@@ -151,7 +151,7 @@ def note_findings(
 
 
 def _mixed(note: str, counted: Counter[str], origin: str, action: str) -> Finding:
-    rows = listed(f"{value} ({count} rows)" for value, count in counted.items())
+    rows = listed(f"{value} ({count} row{'' if count == 1 else 's'})" for value, count in counted.items())
     if note == "date":
         days = {value: _day(value) for value in counted}
         known = {value: day for value, day in days.items() if day is not None}

@@ -39,27 +39,27 @@ def position_remarks(xy: NDArray[np.float64], crs: CRS, fields: tuple[str, str])
     remarks: list[Remark] = []
     known = np.asarray(~np.isnan(xy).any(axis=1))
     zero = known & np.asarray((np.abs(xy) < 1e-9).all(axis=1))
-    for at in np.flatnonzero(zero):
+    for at in np.flatnonzero(zero).tolist():
         what = (
             f"the position is ({xy[at, 0]:g}, {xy[at, 1]:g}), which stands for a position that was not taken"
         )
-        remarks.append(Remark(int(at), "position", "error", what, "row not used: no position"))
+        remarks.append(Remark(at, "position", "error", what, "row not used: no position"))
     usable = known & ~zero
     if crs.is_geographic:
         impossible = usable & ((np.abs(xy[:, 0]) > 180.0) | (np.abs(xy[:, 1]) > 90.0))
         remarks += _impossible_degrees(xy, impossible, usable, fields)
-        usable &= ~impossible
-        floor = OUTLIER_FLOOR["degrees"]
-    else:
-        unlike = usable & _degrees_among_metres(xy, usable)
-        for at in np.flatnonzero(unlike):
-            what = f"({xy[at, 0]:g}, {xy[at, 1]:g}) look like degrees among projected coordinates"
-            action = "row not used: convert it to the coordinate system of the other rows"
-            remarks.append(Remark(int(at), "position", "error", what, action))
-        usable &= ~unlike
-        floor = OUTLIER_FLOOR["projected"] / _metres_per_unit(crs)
-        remarks += _outside_area_of_use(xy, usable, crs)
-    return remarks + _misplaced(xy, usable, floor, fields)
+        return remarks + _misplaced(xy, usable & ~impossible, OUTLIER_FLOOR["degrees"], fields)
+    unlike = usable & _degrees_among_metres(xy, usable)
+    for at in np.flatnonzero(unlike).tolist():
+        what = f"({xy[at, 0]:g}, {xy[at, 1]:g}) look like degrees among projected coordinates"
+        action = "row not used: convert it to the coordinate system of the other rows"
+        remarks.append(Remark(at, "position", "error", what, action))
+    usable &= ~unlike
+    misplaced = _misplaced(xy, usable, OUTLIER_FLOOR["projected"] / _metres_per_unit(crs), fields)
+    usable[[remark.at for remark in misplaced if remark.at is not None and remark.severity == "error"]] = (
+        False
+    )
+    return [*remarks, *misplaced, *_outside_area_of_use(xy, usable, crs)]
 
 
 def stated_crs_remarks(name: str, cells: Sequence[object], crs: CRS) -> list[Remark]:
@@ -112,6 +112,12 @@ def _impossible_degrees(
 ) -> list[Remark]:
     remarks: list[Remark] = []
     exchangeable = impossible & (np.abs(xy[:, 0]) <= 90.0) & (np.abs(xy[:, 1]) <= 180.0)
+    possible = np.unique(xy[usable & ~impossible], axis=0)
+    if len(possible) >= 4 and len(possible) > exchangeable.sum():
+        # Among known sites an exchange is worth proposing only where it leads to them.
+        centre, radius = _centre(possible)
+        away = np.hypot(*(xy[:, ::-1] - centre).T)
+        exchangeable &= away <= max(OUTLIER_RADII * radius, OUTLIER_FLOOR["degrees"])
     for at in np.flatnonzero(impossible):
         x, y = xy[at]
         k = 1 if abs(y) > 90.0 else 0
@@ -176,9 +182,8 @@ def _misplaced(
     places = np.unique(xy[usable], axis=0)
     if len(places) < 4:
         return []
-    centre = np.median(places, axis=0)
+    centre, radius = _centre(places)
     distance = np.hypot(*(xy - centre).T)
-    radius = float(np.median(np.hypot(*(places - centre).T)))
     far = usable & (distance > max(OUTLIER_RADII * radius, floor))
     core = usable & ~far
     if not far.any() or not core.any():
@@ -212,3 +217,9 @@ def _misplaced(
         kept = [remark for remark in remarks if remark.severity == "error"]
         return [*kept, Remark(None, "position", "warning", what, "used as they are; check the positions")]
     return remarks
+
+
+def _centre(places: NDArray[np.float64]) -> tuple[NDArray[np.float64], float]:
+    """Return the median position and the median distance from it; neither is moved by a few slips."""
+    centre = np.median(places, axis=0)
+    return centre, float(np.median(np.hypot(*(places - centre).T)))

@@ -99,6 +99,19 @@ def cell_text(value: object) -> str | None:
     return str(value)
 
 
+def quoted(value: object) -> str:
+    """Return a cell in quotation marks for a message, without the backslashes of a program.
+
+    Examples
+    --------
+    >>> print(quoted("12 "), quoted(12.5), quoted("1°17'S"))
+    '12 ' 12.5 “1°17'S”
+    """
+    if not isinstance(value, str):
+        return repr(value)
+    return f"“{value}”" if "'" in value else f"'{value}'"
+
+
 def read_count(value: object, decimal: str = ".") -> Reading:
     """Read a count of people.
 
@@ -156,16 +169,22 @@ def read_number(value: object, decimal: str = ".") -> Reading:
         return Reading(problem=odd)
     if not isinstance(value, str):
         number = float(value)  # type: ignore[arg-type]
-        return Reading(number) if math.isfinite(number) else Reading(problem=f"{value!r} is not finite")
+        return Reading(number) if math.isfinite(number) else Reading(problem=f"{quoted(value)} is not finite")
     text = plain(value)
     if decimal == ",":
         # A lone point is harmless only where the text holds no comma and no thousands pattern.
         if "." in text and ("," in text or _GROUPED.fullmatch(text)):
-            return Reading(problem=f"{value!r} can be read in two ways (thousands separator or decimal sign)")
+            return Reading(
+                problem=f"{quoted(value)} can be read in two ways (thousands separator or decimal sign)"
+            )
         text = text.replace(",", ".", 1)
     elif "," in text:
-        return Reading(problem=f"{value!r} has a comma: declare decimal=',' if it is a decimal comma")
-    return Reading(float(text)) if _DECIMAL.fullmatch(text) else Reading(problem=f"{value!r} is not a number")
+        return Reading(problem=f"{quoted(value)} has a comma: declare decimal=',' if it is a decimal comma")
+    return (
+        Reading(float(text))
+        if _DECIMAL.fullmatch(text)
+        else Reading(problem=f"{quoted(value)} is not a number")
+    )
 
 
 def is_decimal_comma(text: str) -> bool:
@@ -192,7 +211,7 @@ def _not_a_number(value: object) -> str | None:
     try:
         float(value)  # type: ignore[arg-type]
     except (TypeError, ValueError, OverflowError):
-        return f"{value!r} is not a number"
+        return f"{quoted(value)} is not a number"
     return None
 
 
@@ -200,25 +219,29 @@ def _typed_count(value: str, decimal: str) -> Reading:
     text = plain(value)
     if text.endswith("%"):
         share = read_number(text[:-1], decimal)
-        return Reading(share.value, f"{value!r} is a percentage, not a count")
+        return Reading(share.value, f"{quoted(value)} is a percentage, not a count")
     if decimal == "," and re.fullmatch(r"[+-]?\d+,0+", text):
         text = text.split(",")[0]
     if _WHOLE.fullmatch(text) and not re.fullmatch(r"[+-]?\d{1,3}\.000", text):
         return _whole(float(text), value)
     if _GROUPED.fullmatch(text):
-        return Reading(problem=f"{value!r} can be read in two ways (thousands separator or decimal sign)")
+        return Reading(
+            problem=f"{quoted(value)} can be read in two ways (thousands separator or decimal sign)"
+        )
     number = read_number(text, "," if is_decimal_comma(text) else decimal)
+    if number.value is None:
+        return Reading(problem=f"{quoted(value)} is not a number")
     # "1e3" is how spreadsheets show a number they have shortened: its digits may be lost.
-    if number.value is None or "e" in text.lower():
-        return Reading(problem=f"{value!r} is not a whole number")
+    if "e" in text.lower():
+        return Reading(problem=f"{quoted(value)} is not written out as a whole number")
     return _whole(number.value, value)
 
 
 def _whole(number: float, value: object) -> Reading:
     if not math.isfinite(number):
-        return Reading(problem=f"{value!r} is not finite")
+        return Reading(problem=f"{quoted(value)} is not finite")
     if number != int(number):
-        return Reading(number, f"{value!r} is not a whole number")
+        return Reading(number, f"{quoted(value)} is not a whole number")
     if abs(number) > LARGEST_COUNT:
-        return Reading(problem=f"{value!r} is larger than any count of people examined")
+        return Reading(problem=f"{quoted(value)} is larger than any count of people examined")
     return Reading(number)

@@ -118,8 +118,8 @@ def read_table(
         if ending in (".xlsx", ".xlsm"):
             return _workbook_table(file, wanted, sheet)
         if ending in PARQUET_ENDINGS:
-            return _frame_table(_read_parquet(file), file)
-        return _frame_table(_read_layer(file, wanted, sheet, encoding), file)
+            return _frame_table(_read_parquet(file), (), file)
+        return _frame_table(*_read_layer(file, wanted, sheet, encoding), file)
     except OSError as error:
         raise InputError(f"{file}: cannot be read ({error}).") from error
 
@@ -128,7 +128,7 @@ def frame_table(frame: pd.DataFrame) -> Table:
     """Take a frame that is already in memory; rows are named by its index, geometry is its active one."""
     if not isinstance(frame, pd.DataFrame):
         raise InputError(f"a DataFrame or GeoDataFrame is expected, not {type(frame).__name__}.")
-    table = _frame_table(frame, None)
+    table = _frame_table(frame, (), None)
     labels = [row_label(label) for label in frame.index]
     repeated = [row_label(label) for label in frame.index[frame.index.duplicated()].unique()]
     findings: list[Finding] = []
@@ -235,27 +235,36 @@ def _choice_note(sheet: str | None, chosen: str, titles: list[str], kind: str) -
     )
 
 
-def _read_layer(file: Path, wanted: Sequence[str], sheet: str | None, encoding: str | None) -> pd.DataFrame:
-    try:
-        layers = [str(name) for name, _ in pyogrio.list_layers(file)]
-        if sheet is not None and sheet not in layers:
-            raise InputError(
-                f"{file}: there is no layer {sheet!r}; the layers are {listed(map(repr, layers))}."
+def _read_layer(
+    file: Path, wanted: Sequence[str], sheet: str | None, encoding: str | None
+) -> tuple[pd.DataFrame, tuple[Finding, ...]]:
+    with warnings.catch_warnings(record=True) as heard:
+        warnings.simplefilter("always")
+        try:
+            layers = [str(name) for name, _ in pyogrio.list_layers(file)]
+            fields = {
+                layer: {
+                    str(name) for name in pyogrio.read_info(file, layer=layer, encoding=encoding)["fields"]
+                }
+                for layer in layers
+            }
+            if sheet is not None and sheet not in layers:
+                known = listed(map(repr, layers))
+                raise InputError(f"{file}: there is no layer {sheet!r}; the layers are {known}.")
+            chosen = sheet or _only_match(
+                file, layers, lambda layer: len(fields[layer] & set(wanted)), wanted, "layer"
             )
-
-        def found(layer: str) -> int:
-            return len(set(pyogrio.read_info(file, layer=layer, encoding=encoding)["fields"]) & set(wanted))
-
-        chosen = sheet or _only_match(file, layers, found, wanted, "layer")
-        frame = pyogrio.read_dataframe(file, layer=chosen, encoding=encoding)
-    except pyogrio.errors.DataSourceError as error:
-        raise InputError(f"{file}: cannot be read as a layer ({error}). Accepted: {ACCEPTED}.") from error
-    except (UnicodeError, LookupError) as error:
-        raise InputError(
-            f"{file}: the text is not in the encoding {encoding or 'UTF-8'!r} ({error})."
-        ) from error
-    frame.attrs["choice"] = _choice_note(sheet, chosen, layers, "layer")
-    return frame
+            frame = pyogrio.read_dataframe(file, layer=chosen, encoding=encoding)
+        except (UnicodeError, LookupError) as error:
+            declared = repr(encoding or "UTF-8")
+            raise InputError(f"{file}: the text is not in the encoding {declared} ({error}).") from error
+        except RuntimeError as error:  # what the reading library raises for damaged files
+            raise InputError(f"{file}: cannot be read as a layer ({error}). Accepted: {ACCEPTED}.") from error
+    notes = [
+        Finding(None, None, None, "note", f"reading {file.name}: {message}", "read as it is")
+        for message in dict.fromkeys(str(warning.message) for warning in heard)
+    ]
+    return frame, (*_choice_note(sheet, chosen, layers, "layer"), *notes)
 
 
 def _read_parquet(file: Path) -> pd.DataFrame:
@@ -268,10 +277,9 @@ def _read_parquet(file: Path) -> pd.DataFrame:
     return pd.read_parquet(file)
 
 
-def _frame_table(frame: pd.DataFrame, file: Path | None) -> Table:
+def _frame_table(frame: pd.DataFrame, findings: tuple[Finding, ...], file: Path | None) -> Table:
     label = str(file) if file else "the frame"
     geometry = None
-    findings: tuple[Finding, ...] = frame.attrs.get("choice", ())
     cells = pd.DataFrame(frame)
     if isinstance(frame, gpd.GeoDataFrame) and frame.active_geometry_name in frame.columns:
         geometry = frame.geometry.reset_index(drop=True)
@@ -280,7 +288,6 @@ def _frame_table(frame: pd.DataFrame, file: Path | None) -> Table:
     refuse_repeats(names, label)
     cells = cells.reset_index(drop=True)
     cells.columns = pd.Index(names, dtype=object)
-    cells.attrs = {}
     if not len(cells):
         raise InputError(f"{label}: there are no rows.")
     return Table(
