@@ -1,4 +1,4 @@
-"""Unit labels that do not collide: the name where it fits, else the code, else the unit's number."""
+"""Unit labels that do not collide: the name where it fits, else a short sign with a key."""
 
 from __future__ import annotations
 
@@ -19,12 +19,18 @@ LETTER_PT = 9.5
 
 @dataclass(frozen=True, slots=True)
 class UnitText:
-    """What may be written on a unit: full name, short code, number in the unit table, class letter."""
+    """What may be written on a unit: its name, a short sign (code or number), a class letter."""
 
     name: str
-    code: str | None
-    number: int
+    short: str
     letter: str = ""
+
+
+def short_signs(frame: Any) -> list[str]:
+    """Give each unit a short sign: its code where all have codes of up to five letters, else its number."""
+    codes = list(frame["code"]) if "code" in frame else []
+    short = [code for code in codes if isinstance(code, str) and 0 < len(code) <= 5]
+    return short if codes and len(short) == len(codes) else [str(i + 1) for i in range(len(frame))]
 
 
 def text_width_pt(text: str, size_pt: float) -> float:
@@ -36,7 +42,7 @@ def text_width_pt(text: str, size_pt: float) -> float:
 def label_units(
     ax: Any, polygons: Sequence[Any], texts: Sequence[UnitText], km_per_pt: float
 ) -> list[UnitText]:
-    """Write the labels, largest unit first, and return the units that got only their number.
+    """Write the labels, largest unit first, and return the units that got only their short sign.
 
     Parameters
     ----------
@@ -52,38 +58,43 @@ def label_units(
     Returns
     -------
     list of UnitText
-        Units labelled by number, in order of number: the caller prints the key.
+        Units labelled by their short sign, in the order given: the caller prints the key.
     """
     taken: list[Any] = []
-    numbered: list[UnitText] = []
-    order = sorted(range(len(texts)), key=lambda i: -polygons[i].area)
+    order = sorted(
+        (i for i in range(len(texts)) if not polygons[i].is_empty), key=lambda i: -polygons[i].area
+    )
+    centres = {i: _roomiest_point(polygons[i]) for i in order}
+    # Letters tell the decision, so they get their room before any name.
     for i in order:
-        polygon, text = polygons[i], texts[i]
-        if polygon.is_empty:
-            continue
-        centre = _roomiest_point(polygon)
-        lift = 0.0
-        if text.letter:
-            side = 1.3 * LETTER_PT * km_per_pt
-            taken.append(
-                shapely.box(
-                    centre.x - side / 2, centre.y - side / 2, centre.x + side / 2, centre.y + side / 2
-                )
+        if texts[i].letter:
+            spot = (centres[i].x, centres[i].y + 0.45 * LETTER_PT * km_per_pt)
+            _place(
+                ax,
+                texts[i].letter,
+                [spot],
+                polygons[i],
+                taken,
+                km_per_pt,
+                share=0.0,
+                size=LETTER_PT,
+                bold=True,
             )
-            _write(ax, centre.x, centre.y, text.letter, LETTER_PT, bold=True)
-            lift = 0.9 * LETTER_PT * km_per_pt
-        spots = _spots(polygon, centre, lift, km_per_pt)
-        candidates = [text.name, *([text.code] if text.code and len(text.code) < len(text.name) else [])]
-        if any(_place(ax, words, spots, polygon, taken, km_per_pt, share=0.8) for words in candidates):
+    shortened = []
+    for i in order:
+        text, polygon = texts[i], polygons[i]
+        spots = _spots(centres[i], text.letter, km_per_pt, text.name)
+        if _place(ax, text.name, spots[:3], polygon, taken, km_per_pt, share=0.8):
             continue
-        if _place(ax, str(text.number), spots, polygon, taken, km_per_pt, share=0.0):
-            numbered.append(text)
-    return sorted(numbered, key=lambda unit: unit.number)
+        spots = _spots(centres[i], text.letter, km_per_pt, text.short)
+        if _place(ax, text.short, spots, polygon, taken, km_per_pt, share=0.5):
+            shortened.append(i)
+    return [texts[i] for i in sorted(shortened)]
 
 
-def number_key(numbered: Sequence[UnitText]) -> str:
-    """Print the key of the units that are labelled by number."""
-    return "; ".join(f"{unit.number} {unit.name}" for unit in numbered)
+def label_key(shortened: Sequence[UnitText]) -> str:
+    """Print the key of the units that are labelled by their short sign."""
+    return "; ".join(f"{unit.short}\u00a0{unit.name}" for unit in shortened)
 
 
 def _roomiest_point(polygon: Any) -> Any:
@@ -94,12 +105,14 @@ def _roomiest_point(polygon: Any) -> Any:
     return polylabel(largest, tolerance=0.02 * largest.area**0.5)
 
 
-def _spots(polygon: Any, centre: Any, lift: float, km_per_pt: float) -> list[tuple[float, float]]:
-    """Positions to try, nearest to the centre first; below the letter where there is one."""
+def _spots(centre: Any, letter: str, km_per_pt: float, words: str) -> list[tuple[float, float]]:
+    """Positions to try, best first: under the letter where there is one, else about the centre."""
     step = NAME_PT * km_per_pt
     x, y = centre.x, centre.y
-    if lift:
-        return [(x, y - lift), (x, y + lift), (x, y - lift - step), (x, y + lift + step)]
+    if letter:
+        below, line = y - 0.62 * step, y + 0.45 * LETTER_PT * km_per_pt
+        aside = (0.5 * LETTER_PT + 0.4 * NAME_PT + 0.31 * NAME_PT * len(words)) * km_per_pt
+        return [(x, below), (x - step, below), (x + step, below), (x + aside, line), (x - aside, line)]
     return [(x, y), (x, y - step), (x, y + step), (x - step, y), (x + step, y)]
 
 
@@ -112,10 +125,12 @@ def _place(
     km_per_pt: float,
     *,
     share: float,
+    size: float = NAME_PT,
+    bold: bool = False,
 ) -> bool:
     """Write words at the first spot with room, at least a share of their box inside the unit."""
-    width = text_width_pt(words, NAME_PT) * km_per_pt
-    height = 1.25 * NAME_PT * km_per_pt
+    width = text_width_pt(words, size) * km_per_pt
+    height = 1.15 * size * km_per_pt
     for x, y in spots:
         box = shapely.box(x - width / 2, y - height / 2, x + width / 2, y + height / 2)
         if any(box.intersects(other) for other in taken):
@@ -123,7 +138,7 @@ def _place(
         if share and box.intersection(polygon).area < share * box.area:
             continue
         taken.append(box)
-        _write(ax, x, y, words, NAME_PT)
+        _write(ax, x, y, words, size, bold=bold)
         return True
     return False
 

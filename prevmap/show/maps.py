@@ -206,9 +206,11 @@ def draw_surface(
         _mark_extrapolated(sheet, surface, ground, extrapolated)
         handles.append(swatch("extrapolated", "#FFFFFF", pattern="lines"))
     draw_borders(sheet, ground)
+    notes = surface_notes(surface)
     if sites and show == "prevalence":
         draw_sites(sheet, surface.sites, mappable.norm)
         handles.append(site_entry("raw proportion of a site"))
+        notes += _above_scale(surface.sites, mappable.norm)
     reasons = blank_reasons(surface, ground)
     if reasons:
         handles.append(blank_entry(reasons))
@@ -217,7 +219,7 @@ def draw_surface(
         title=title,
         subtitle=sentence(meaning(surface)),
         handles=handles,
-        notes=surface_notes(surface),
+        notes=notes,
     )
 
 
@@ -240,7 +242,8 @@ def draw_site_map(
         draw_ground(sheet, ground)
         draw_borders(sheet, ground)
         handles.append(swatch("study area", BLANK))
-    markers = draw_sites(sheet, sites, norm or prevalence_norm(top, top), sized=True)
+    norm = norm or prevalence_norm(top, top)
+    markers = draw_sites(sheet, sites, norm, sized=True)
     prevalence_bar(sheet, markers, "positive of those examined, raw", sites["proportion"])
     examined, positive = int(sites["examined"].sum()), int(sites["positive"].sum())
     smallest, largest = int(sites["examined"].min()), int(sites["examined"].max())
@@ -252,7 +255,10 @@ def draw_site_map(
         title="What was measured: raw site proportions",
         subtitle=sentence(measured(source)),
         handles=handles,
-        notes=[f"{count(names, 'site')}, {examined:,} examined, {positive:,} positive."],
+        notes=[
+            f"{count(names, 'site')}, {examined:,} examined, {positive:,} positive.",
+            *_above_scale(sites, norm),
+        ],
     )
 
 
@@ -389,6 +395,13 @@ def _placed_sites(source: Any, region: Any) -> tuple[Any, Any]:
         frame = frame.to_crs(frame.estimate_utm_crs())
     frame = frame.assign(proportion=frame["positive"] / frame["examined"])
     return frame, region
+
+
+def _above_scale(sites: Any, norm: Any) -> list[str]:
+    """Count the sites that the colour scale does not reach, in a sentence; nothing where there are none."""
+    top = float(norm.vmax or 1.0)
+    over = int(np.count_nonzero(np.asarray(sites["proportion"], dtype=float) > top * (1.0 + 1e-9)))
+    return [f"{count(over, 'site')} above the end of the scale."] if over else []
 
 
 def _shared_norm(surface: Any) -> Normalize:

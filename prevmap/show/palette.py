@@ -42,7 +42,7 @@ class ClassStyle:
 
 
 def nice_ceiling(value: float) -> float:
-    """Smallest of 1, 1.5, 2, 2.5, 3, 4, 5, 6, 8, 10 times a power of ten that is not below a value.
+    """Smallest of 1, 1.2, 1.5, 2, 2.5, 3, 4, 5, 6, 7, 8, 10 times a power of ten that is not below a value.
 
     Examples
     --------
@@ -52,7 +52,7 @@ def nice_ceiling(value: float) -> float:
     if not math.isfinite(value) or value <= 0.0:
         return 1.0
     power = 10.0 ** math.floor(math.log10(value))
-    for step in (1.0, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 8.0, 10.0):
+    for step in (1.0, 1.2, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 7.0, 8.0, 10.0):
         # One part in 10^9 absorbs the rounding of the division.
         if step * power >= value * (1.0 - 1e-9):
             return float(f"{step * power:.12g}")
@@ -63,10 +63,10 @@ def prevalence_norm(surface_max: float, sites_max: float = 0.0) -> Normalize:
     """Scale from zero that surface and site proportions share.
 
     A few small sites with extreme proportions may lie above the end of the scale: it stretches to at most
-    1.6 times the modelled maximum for them, and the colour bar then ends in an arrow.
+    1.15 times the modelled maximum for them, and the colour bar then ends in an arrow.
     """
     top = surface_max if surface_max > 0 else sites_max
-    stretched = max(top, min(sites_max, 1.6 * top))
+    stretched = max(top, min(sites_max, 1.15 * top))
     return Normalize(0.0, min(1.0, nice_ceiling(stretched)))
 
 

@@ -23,7 +23,7 @@ from prevmap.show.ground import (
     read_ground,
     thin,
 )
-from prevmap.show.labels import UnitText, label_units, number_key
+from prevmap.show.labels import UnitText, label_key, label_units, short_signs
 from prevmap.show.outline import dots, fill, hatch, in_km
 from prevmap.show.palette import (
     BLANK,
@@ -72,7 +72,7 @@ def map_units(
     certainty : float or mapping, optional
         Probability marked in the colour bar of an exceedance map; that of the decisions, else 0.90.
     labels : bool
-        Write unit names where they fit, else codes, else numbers with a key under the map.
+        Write unit names where they fit, else codes (or numbers) with a key under the map.
 
     Returns
     -------
@@ -170,9 +170,9 @@ def draw_unit_map(
             if ground.water
             else shapes
         )
-        key = number_key(label_units(sheet.ax, land, texts, sheet.km_per_pt))
+        key = label_key(label_units(sheet.ax, land, texts, sheet.km_per_pt))
         if key:
-            notes.append(f"Units by number: {key}.")
+            notes.append(f"Short labels: {key}.")
     return close_sheet(sheet, title=title, subtitle=_subtitle(units), handles=handles, notes=notes)
 
 
@@ -272,10 +272,10 @@ def _rows_by_unit(units: Any) -> Any:
 
 
 def _unit_texts(frame: Any, letters: list[str]) -> list[UnitText]:
-    codes = frame["code"] if "code" in frame else [None] * len(frame)
+    signs = short_signs(frame)
     return [
-        UnitText(str(name), None if code is None or code != code else str(code), i + 1, letter)
-        for i, (name, code, letter) in enumerate(zip(frame["unit"], codes, letters, strict=True))
+        UnitText(str(name), sign, letter)
+        for name, sign, letter in zip(frame["unit"], signs, letters, strict=True)
     ]
 
 

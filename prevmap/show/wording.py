@@ -144,6 +144,11 @@ def meaning(source: Any) -> str:
     return "; ".join(part for part in sentences if part)
 
 
+def file_name(path: object) -> str:
+    """Return the last part of a path: folders of one machine say nothing to a reader on another."""
+    return str(path).replace("\\", "/").rsplit("/", 1)[-1]
+
+
 def sentence(text: str) -> str:
     """Start a clause with a capital and end it with a full stop."""
     return text[:1].upper() + text[1:] + ("." if text and not text.endswith(".") else "")

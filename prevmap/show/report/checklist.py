@@ -11,7 +11,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from prevmap.show.report.methods import integrated
-from prevmap.show.wording import NOT_STATED, count, listed, noted
+from prevmap.show.wording import NOT_STATED, count, file_name, listed, noted
 
 if TYPE_CHECKING:
     from prevmap.show.report.content import ReportContent
@@ -112,13 +112,13 @@ def _survey_line(content: ReportContent) -> str:
 
 
 def _other_inputs(content: ReportContent) -> str:
-    parts = [f"boundaries: {content.region.source}"] if content.region.has_units else []
+    parts = [f"boundaries: {file_name(content.region.source)}"] if content.region.has_units else []
     terms = [str(term) for term in content.fit.coefficients.index if term != "intercept"]
     if terms:
         parts.append(f"covariates: {listed(terms)}")
     population: Any = getattr(content.surface.grid, "population", None)
     if population is not None:
-        parts.append(f"population: {_file_name(population.path)}")
+        parts.append(f"population: {file_name(population.path)}")
     files = "; ".join(parts) or "none"
     return f"{files}. Their origin: {_said(content.statements, 'data_sources')}."
 
@@ -147,7 +147,3 @@ def _files(content: ReportContent) -> str:
     if content.units is not None:
         names += ["units.csv", "units.gpkg"]
     return f"{listed(names)}, beside this report."
-
-
-def _file_name(path: object) -> str:
-    return str(path).replace("\\", "/").rsplit("/", 1)[-1]

@@ -167,9 +167,8 @@ def _units(content: ReportContent) -> str:
     text = (
         f"Unit estimates are means over the cells of a unit weighted by {weights}, taken within each of "
         f"{units.draws:,} joint draws from the posterior (Gething, Patil & Hay 2010), never by averaging the "
-        "exceedance of cells. Raw estimates carry Wilson intervals (Wilson 1927), which treat "
-        "the people examined as "
-        "a simple random sample."
+        "exceedance of cells. Raw estimates carry Wilson intervals (Wilson 1927), which take "
+        "the people examined for a simple random sample."
     )
     if content.decisions is not None:
         text += (

@@ -71,9 +71,12 @@ def _context(content: ReportContent) -> dict[str, Any]:
     """Everything the template prints, as text, tables and figures."""
     fit: Any = content.fit
     paragraphs = methods_paragraphs(content)
-    maps = {name: figure for name, figure in content.figures.items() if name not in _ELSEWHERE}
-    of_units = [figure for name, figure in maps.items() if name.startswith("unit_") or name == "decisions"]
-    of_cells = [figure for figure in maps.values() if figure not in of_units]
+    of_cells, of_units = [], []
+    for name, figure in content.figures.items():
+        if name.startswith("unit_") or name == "decisions":
+            of_units.append(figure)
+        elif name not in _ELSEWHERE:
+            of_cells.append(figure)
     nugget = str(content.surface.nugget)
     return {
         "title": content.title,

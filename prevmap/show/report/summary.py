@@ -7,7 +7,16 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from prevmap.plan.classify import ABOVE, BELOW, UNDECIDED, checked_certainty
-from prevmap.show.wording import NOT_STATED, count, inequality, listed, noted, percent, threshold_text
+from prevmap.show.wording import (
+    NOT_STATED,
+    count,
+    file_name,
+    inequality,
+    listed,
+    noted,
+    percent,
+    threshold_text,
+)
 
 if TYPE_CHECKING:
     from prevmap.show.report.content import ReportContent
@@ -55,7 +64,7 @@ def survey_facts(content: ReportContent) -> list[tuple[str, str]]:
     survey, fit, region = content.survey, content.fit, content.region
     facts = [(label, noted(survey, field)) for label, field in _FIELDS]
     facts += [
-        ("Source", str(survey.source or NOT_STATED)),
+        ("Source", file_name(survey.source) if survey.source else NOT_STATED),
         ("Rows read", f"{survey.rows_read:,}"),
         ("Sites used", f"{fit.n_sites:,}"),
         ("People examined", f"{fit.n_examined:,}"),
@@ -66,7 +75,7 @@ def survey_facts(content: ReportContent) -> list[tuple[str, str]]:
             ("Rows without a position", f"{len(survey.unplaced):,}, in the raw estimate of their unit only")
         )
     if region.has_units:
-        facts.append(("Units", f"{len(region.units):,}, from {region.source}"))
+        facts.append(("Units", f"{len(region.units):,}, from {file_name(region.source)}"))
     else:
         facts.append(("Study area", "buffered outline of the sites; no unit boundaries were given"))
     population: Any = getattr(content.surface.grid, "population", None)
@@ -108,7 +117,7 @@ def _decided(content: ReportContent) -> list[str]:
     if decided:
         wrong = f"{decisions.expected_wrong:.1f}"
         sentences.append(
-            f"Of the {decided:,} decided, {wrong} can be expected to be wrong if the model holds."
+            f"Of the {decided:,} decided, about {wrong} can be expected to be wrong if the model holds."
         )
     bare = int(((decisions.frame["decision"] == UNDECIDED) & (decisions.frame["basis"] != "own sites")).sum())
     if bare:
@@ -142,7 +151,7 @@ def _cells(content: ReportContent) -> list[str]:
 def _population_words(population: Any) -> str:
     if population is None:
         return "not given: units are weighted by area, and no land is left blank for being empty"
-    name = str(population.path).replace("\\", "/").rsplit("/", 1)[-1]
+    name = file_name(population.path)
     ages = "–".join(f"{age:g}" for age in population.ages) if population.ages else NOT_STATED
     year = str(population.year) if population.year else NOT_STATED
     return f"{name}; ages {ages}; year {year}"

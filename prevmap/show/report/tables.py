@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -10,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 import pandas as pd
 
 from prevmap.plan.classify import ABOVE, BELOW, UNDECIDED
+from prevmap.show.labels import short_signs
 from prevmap.show.palette import decision_styles
 from prevmap.show.wording import inequality, percent, probability, significant, threshold_text
 
@@ -18,10 +20,11 @@ if TYPE_CHECKING:
 
 _SEVERITIES = (
     ("error", "Not used", "these rows or values did not enter the estimates"),
-    ("warning", "Used, but doubtful", "these rows entered the estimates and deserve a look"),
+    ("warning", "Doubtful", "worth a look; the last column tells what was done"),
     ("note", "Notes", "nothing to do, good to know"),
 )
 _MOST_ROWS = 200
+_POSITION = re.compile(r"\((-?\d+\.\d{2,}), (-?\d+\.\d{2,})\)")
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,6 +60,17 @@ class FindingGroup:
     more: int
 
 
+def without_positions(text: str) -> str:
+    """Round pairs of coordinates to one decimal: the report is passed on, exact site positions are not.
+
+    Examples
+    --------
+    >>> without_positions("(-32.04213, 5.92444) is far from the other sites")
+    '(-32.0, 5.9) is far from the other sites'
+    """
+    return _POSITION.sub(lambda pair: f"({float(pair[1]):.1f}, {float(pair[2]):.1f})", text)
+
+
 def finding_groups(findings: pd.DataFrame) -> list[FindingGroup]:
     """Group findings by severity, worst first."""
     groups = []
@@ -65,7 +79,13 @@ def finding_groups(findings: pd.DataFrame) -> list[FindingGroup]:
         if mine.empty:
             continue
         rows = tuple(
-            (_cell(f.row), _cell(f.site), _cell(f.field), _cell(f.what), _cell(f.action))
+            (
+                _cell(f.row),
+                _cell(f.site),
+                _cell(f.field),
+                without_positions(_cell(f.what)),
+                without_positions(_cell(f.action)),
+            )
             for f in mine.head(_MOST_ROWS).itertuples()
         )
         table = Table(("row", "site", "field", "what was found", "what was done"), rows)
@@ -138,7 +158,7 @@ def unit_table(content: ReportContent) -> Table | None:
 
     heads = [
         "unit",
-        "no.",
+        "label",
         *(["part of"] if parents else []),
         "sites",
         "examined",
@@ -148,11 +168,12 @@ def unit_table(content: ReportContent) -> Table | None:
     heads += ["modelled mean (95 % interval)", *(f"P(above {threshold_text(t)})" for t in content.thresholds)]
     heads += [*(["decision"] if decisions is not None else []), "basis"]
     heads += [*(["people"] if people else []), *(["infected (95 % interval)"] if infected else [])]
-    left = {"unit", "part of", "decision", "basis"}
+    left = {"unit", "label", "part of", "decision", "basis"}
+    signs = short_signs(content.region.units)
     rows = []
     for i in order:
         unit = frame.iloc[i]
-        cells = [_cell(unit["unit"]), str(i + 1), *([_cell(unit["parent"])] if parents else [])]
+        cells = [_cell(unit["unit"]), signs[i], *([_cell(unit["parent"])] if parents else [])]
         cells += [_whole(unit["sites"]), _whole(unit["examined"]), _whole(unit["positive"])]
         cells.append(_interval(unit, "direct_estimate", "direct_lower95", "direct_upper95"))
         cells.append(_interval(unit, "mean", "lower95", "upper95"))
