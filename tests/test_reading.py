@@ -168,6 +168,7 @@ def test_degrees_are_read_in_every_usual_notation(cell, axis, expected):
     [
         ("36 49", "lon", "two ways"),
         ("36°82'00\"E", "lon", "60 minutes"),
+        ("36°60'00\"E", "lon", "60 minutes"),
         ("36°49'61\"E", "lon", "60 minutes or seconds"),
         ("1°17'30\"S", "lon", "latitude where a longitude is expected"),
         ("36°49'12\"E", "lat", "longitude where a latitude is expected"),

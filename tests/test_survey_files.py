@@ -112,6 +112,11 @@ def test_a_separator_declared_on_the_first_line_is_believed(tmp_path):
     check(survey, [3, 4, 5])
 
 
+def test_a_byte_order_mark_before_a_quotation_mark_is_no_text(tmp_path):
+    text = TABLE.replace("village", '"village"', 1)
+    check(prevmap.read_survey(write(tmp_path, text, encoding="utf-8-sig"), **ROLES), [2, 3, 4])
+
+
 def test_a_header_that_starts_with_a_hash_is_a_header(tmp_path):
     text = TABLE.replace("village", "#village")
     check(prevmap.read_survey(write(tmp_path, text), **{**ROLES, "site": "#village"}), [2, 3, 4])

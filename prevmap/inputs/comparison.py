@@ -49,8 +49,8 @@ def comparison_findings(frame: gpd.GeoDataFrame, unplaced: pd.DataFrame) -> list
 
 
 def _identical(rows: pd.DataFrame) -> list[Finding]:
-    text = rows.map(lambda cell: cell_text(cell) if not isinstance(cell, list | dict | set) else repr(cell))
-    keys = pd.Series(list(map(tuple, text.to_numpy(dtype=object))), dtype=object)
+    columns = [[_comparable(cell) for cell in rows[name]] for name in rows.columns]
+    keys = pd.Series(list(zip(*columns, strict=True)), dtype=object)
     repeated = keys.duplicated().to_numpy()
     if not repeated.any():
         return []
@@ -85,28 +85,29 @@ _POOLED = "rows with equal covariates are pooled; other rows of the site share o
 def _several_positions(frame: gpd.GeoDataFrame) -> list[Finding]:
     action = "each row keeps its position; correct the site or the position if they are one place"
     x, y = frame.geometry.x.to_numpy(), frame.geometry.y.to_numpy()
+    rows, crs = list(map(row_label, frame.index)), frame.crs
     found = []
     for site, places in _by(frame["site"], range(len(frame))):
-        away = _distance_km(frame.crs, x[places], y[places])
-        if (x[places] != x[places[0]]).any() or (y[places] != y[places[0]]).any():
+        positions = {(x[at], y[at]) for at in places}
+        if len(positions) > 1:
+            away = _distance_km(crs, x[places], y[places])
             farthest = places[int(np.argmax(away))]
-            row, first = row_label(frame.index[farthest]), row_label(frame.index[places[0]])
-            positions = len(set(zip(x[places], y[places], strict=True)))
-            what = f"site has {positions} positions; row {row} is {_length(away.max())} from row {first}"
-            found.append(Finding(row, site, "site", "warning", what, action))
+            distance = f"row {rows[farthest]} is {_length(away.max())} from row {rows[places[0]]}"
+            what = f"site has {len(positions)} positions; {distance}"
+            found.append(Finding(rows[farthest], site, "site", "warning", what, action))
     return _gathered(found, "sites have several positions", action)
 
 
 def _shared_positions(frame: gpd.GeoDataFrame) -> list[Finding]:
     action = "kept as different sites with a site effect each; give them one site id if they are one place"
-    where = list(zip(frame.geometry.x, frame.geometry.y, strict=True))
+    where = zip(frame.geometry.x, frame.geometry.y, strict=True)
+    rows, names = list(map(row_label, frame.index)), list(frame["site"])
     found = []
     for _, places in _by(where, range(len(frame))):
-        sites = list(dict.fromkeys(frame["site"].iloc[places]))
+        sites = list(dict.fromkeys(names[at] for at in places))
         if len(sites) > 1:
-            row = row_label(frame.index[places[0]])
             what = f"sites share one position: {listed(sites)}"
-            found.append(Finding(row, sites[0], "site", "note", what, action))
+            found.append(Finding(rows[places[0]], sites[0], "site", "note", what, action))
     return _gathered(found, "positions are shared by several sites", action)
 
 
@@ -132,6 +133,13 @@ def _missing_zeros(rows: pd.DataFrame) -> list[Finding]:
     )
     action = "used as they are; if sites without positives were left out, prevalence is too high: add them"
     return [Finding(None, None, "positive", "warning", what, action)]
+
+
+def _comparable(cell: object) -> object:
+    """Return a cell so that equal cells are equal keys: text trimmed, empty cells None."""
+    if isinstance(cell, str | int | float):
+        return cell_text(cell) if isinstance(cell, str) else cell if cell == cell else None
+    return repr(cell) if isinstance(cell, list | dict | set) else cell_text(cell)
 
 
 def _by(keys: Iterable[Any], members: Iterable[Any]) -> list[tuple[Any, list[Any]]]:

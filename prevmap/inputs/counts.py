@@ -119,7 +119,7 @@ def _row_remarks(at: int, examined: Reading, positive: Reading) -> list[Remark]:
     remarks: list[Remark] = []
     for field, reading in (("examined", examined), ("positive", positive)):
         if reading.problem:
-            remarks.append(Remark(at, field, "error", f"{field}: {reading.problem}", "row not used"))
+            remarks.append(Remark(at, field, "error", reading.problem, "row not used"))
         elif reading.value is not None and reading.value < 0:
             what = f"{field} is negative: {reading.value:.0f}"
             remarks.append(Remark(at, field, "error", what, "row not used"))

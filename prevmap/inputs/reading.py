@@ -60,7 +60,7 @@ def is_missing(value: object) -> bool:
 
 def trimmed(text: str) -> str:
     """Return the text without white space around it and without characters that cannot be seen."""
-    return text.translate(_INVISIBLE).strip()
+    return text.strip() if text.isascii() else text.translate(_INVISIBLE).strip()
 
 
 def plain(text: str) -> str:
