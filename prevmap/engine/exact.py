@@ -54,7 +54,7 @@ class DenseState:
     curvature : (sum of squared block sizes,) float
     iterations : int
     smallest_pivot : float
-        Smallest pivot of ``I + S W``.
+        Smallest pivot of ``I + K W``.
     """
 
     theta: Theta
@@ -64,6 +64,23 @@ class DenseState:
     mean_shift: NDArray[np.float64]
     curvature: NDArray[np.float64]
     iterations: int
+    smallest_pivot: float
+
+
+@dataclass(frozen=True, slots=True)
+class _Reduction:
+    """What the data take away from the prior covariance.
+
+    ``field`` = W (I + K W)^-1 at known coefficients, ``whole`` = W (I + S W)^-1 with them estimated;
+    ``coefficients`` and ``covariance`` are the posterior covariances of coefficients and linear predictor,
+    ``log_determinant`` is log|I + S W|.
+    """
+
+    field: NDArray[np.float64]
+    whole: NDArray[np.float64]
+    coefficients: NDArray[np.float64]
+    covariance: NDArray[np.float64]
+    log_determinant: float
     smallest_pivot: float
 
 
@@ -169,17 +186,12 @@ class DenseModel:
         eta = self._offset + f
         terms = evaluate(self.data, eta, theta.nugget_sd)
         W = self._blocks(terms.curvature)
-        lu = lu_factor(np.eye(a.size) + S @ W)
-        pivots = np.diag(lu[0])
-        swaps = int(np.sum(lu[1] != np.arange(a.size)))
-        if np.any(pivots == 0) or np.prod(np.sign(pivots)) * (-1.0) ** swaps <= 0:
-            raise FitError("the posterior is not peaked at the mode: its Hessian is not positive definite")
-        covariance = lu_solve(lu, S)
-        log_evidence = terms.value - 0.5 * float(a @ f) - 0.5 * float(np.sum(np.log(np.abs(pivots))))
+        reduction = self._reduction(K, W)
+        R = reduction.whole
+        log_evidence = terms.value - 0.5 * float(a @ f) - 0.5 * reduction.log_determinant
 
-        higher = higher_terms(self.data, eta, theta.nugget_sd, self._gather(covariance))
-        shift = 0.5 * lu_solve(lu, higher.third, trans=1)  # (I + S W)' = I + W S
-        R = lu_solve(lu, W.T, trans=1).T  # W (I + S W)^-1
+        higher = higher_terms(self.data, eta, theta.nugget_sd, self._gather(reduction.covariance))
+        shift = 0.5 * (higher.third - R @ (S @ higher.third))  # (I + W S)^-1 = I - R S
         d_range = theta.sd**2 * correlation_range_derivative(self._distance, theta.range_km, self.nu)
         gradient = np.zeros(3)
         for at, dS in ((0, d_range), (1, 2.0 * K)):
@@ -189,7 +201,7 @@ class DenseModel:
                 higher.nugget_value + 0.5 * higher.nugget_hessian + float(shift @ (S @ higher.nugget_gradient))
             )
         return DenseState(
-            theta, a, log_evidence, gradient, shift, terms.curvature, steps, float(np.min(np.abs(pivots)))
+            theta, a, log_evidence, gradient, shift, terms.curvature, steps, reduction.smallest_pivot
         )
 
     def locate(self, xy_km: NDArray[np.float64], design: NDArray[np.float64]) -> DenseRows:
@@ -200,28 +212,66 @@ class DenseModel:
         """(n,) bool: all true, since this engine has no mesh to leave."""
         return np.ones(len(xy_km), dtype=bool)
 
-    def _cross(self, theta: Theta, rows: DenseRows) -> NDArray[np.float64]:
-        K = theta.sd**2 * correlation(cdist(rows.xy_km, self.xy_km), theta.range_km, self.nu)
-        return K + (rows.design * self.coefficient_variance) @ self.design.T
+    def _reduction(self, K: NDArray[np.float64], W: NDArray[np.float64]) -> _Reduction:
+        """Condition on the data in two steps, field then coefficients, so that flat priors lose no digits.
 
-    def _reduction(self, state: DenseState) -> NDArray[np.float64]:
-        S = self._field(state.theta) + self._linear
-        W = self._blocks(state.curvature)
-        return lu_solve(lu_factor(np.eye(S.shape[0]) + S @ W), W.T, trans=1).T
+        Raises
+        ------
+        FitError
+            Where the Hessian of the log posterior is not positive definite.
+        """
+        X, n = self.design, W.shape[0]
+        lu = lu_factor(np.eye(n) + K @ W)
+        pivots = np.diag(lu[0])
+        swaps = int(np.sum(lu[1] != np.arange(n)))
+        field = lu_solve(lu, W.T, trans=1).T  # W (I + K W)^-1
+        field = 0.5 * (field + field.T)
+        information = np.diag(1.0 / self.coefficient_variance) + X.T @ field @ X
+        peaked = np.all(pivots != 0) and np.prod(np.sign(pivots)) * (-1.0) ** swaps > 0
+        eigenvalues = np.linalg.eigvalsh(information)
+        if not peaked or eigenvalues[0] <= 0:
+            raise FitError("the posterior is not peaked at the mode: its Hessian is not positive definite")
+        log_determinant = float(np.sum(np.log(np.abs(pivots)))) + float(np.sum(np.log(self.coefficient_variance)))
+        log_determinant += float(np.linalg.slogdet(information)[1])
+        coefficients = np.linalg.inv(information)
+        reach = lu_solve(lu, X)  # (I + K W)^-1 X
+        covariance = lu_solve(lu, K) + reach @ coefficients @ reach.T
+        whole = field - field @ X @ coefficients @ X.T @ field
+        return _Reduction(
+            field, whole, coefficients, covariance, log_determinant, float(np.min(np.abs(pivots)))
+        )
+
+    def _conditioned(self, state: DenseState) -> _Reduction:
+        return self._reduction(self._field(state.theta), self._blocks(state.curvature))
 
     def moments(self, state: DenseState, rows: DenseRows) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Mean and variance of the linear predictor (n,) at each row."""
-        cross = self._cross(state.theta, rows)
-        mean = rows.design @ self.coefficient_mean + cross @ (state.mode + state.mean_shift)
-        prior = state.theta.sd**2 + (rows.design**2) @ self.coefficient_variance
-        variance = prior - np.einsum("ij,ij->i", cross @ self._reduction(state), cross)
+        mean, near, left, reduction = self._predictive(state, rows)
+        variance = state.theta.sd**2 - np.einsum("ij,ij->i", near @ reduction.field, near)
+        variance += np.einsum("ij,ij->i", left @ reduction.coefficients, left)
         return mean, np.maximum(variance, 0.0)
+
+    def _predictive(
+        self, state: DenseState, rows: DenseRows
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64], _Reduction]:
+        """Mean, field covariance with the data, and what of each row's covariates the field does not explain."""
+        reduction = self._conditioned(state)
+        near = state.theta.sd**2 * correlation(cdist(rows.xy_km, self.xy_km), state.theta.range_km, self.nu)
+        weights = state.mode + state.mean_shift
+        coefficients = self.coefficient_mean + self.coefficient_variance * (self.design.T @ weights)
+        return (
+            rows.design @ coefficients + near @ weights,
+            near,
+            rows.design - near @ reduction.field @ self.design,
+            reduction,
+        )
 
     def coefficients(self, state: DenseState) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Mean (p,) and covariance (p, p) of the coefficients."""
-        VX = self.coefficient_variance[:, None] * self.design.T
-        mean = self.coefficient_mean + VX @ (state.mode + state.mean_shift)
-        return mean, np.diag(self.coefficient_variance) - VX @ self._reduction(state) @ VX.T
+        mean = self.coefficient_mean + self.coefficient_variance * (
+            self.design.T @ (state.mode + state.mean_shift)
+        )
+        return mean, self._conditioned(state).coefficients
 
     def draws(
         self, state: DenseState, windows: Iterable[DenseRows], rng: np.random.Generator, count: int
@@ -242,13 +292,11 @@ class DenseModel:
                 f"{_LARGEST_JOINT:,}. Use engine='mesh' or a coarser grid"
             )
         rows = DenseRows(xy, design)
-        mean, _ = self.moments(state, rows)
-        cross = self._cross(state.theta, rows)
-        prior = state.theta.sd**2 * correlation(cdist(xy, xy), state.theta.range_km, self.nu)
-        prior += (design * self.coefficient_variance) @ design.T
-        covariance = prior - cross @ self._reduction(state) @ cross.T
+        mean, near, left, reduction = self._predictive(state, rows)
+        covariance = state.theta.sd**2 * correlation(cdist(xy, xy), state.theta.range_km, self.nu)
+        covariance += left @ reduction.coefficients @ left.T - near @ reduction.field @ near.T
         covariance = 0.5 * (covariance + covariance.T)
-        covariance[np.diag_indices_from(covariance)] += _JITTER * float(np.max(np.diag(prior)))
+        covariance[np.diag_indices_from(covariance)] += _JITTER * state.theta.sd**2
         joint = mean[:, None] + cholesky(covariance, lower=True) @ rng.standard_normal((len(xy), count))
         start = 0
         for part in parts:

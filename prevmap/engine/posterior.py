@@ -17,7 +17,7 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 from scipy.interpolate import RBFInterpolator
-from scipy.optimize import minimize
+from scipy.spatial import cKDTree
 
 from prevmap.engine.laplace import Theta
 from prevmap.errors import FitError
@@ -25,10 +25,17 @@ from prevmap.errors import FitError
 log = logging.getLogger("prevmap")
 
 _STEP = 1.5  # lattice step in posterior standard deviations: trapezoid error about 2 exp(-2 pi^2/step^2) = 3e-4
-_DROP = 3.5  # a lattice point this far below the mode (log scale) has no neighbours added
+_DROP = 2.5  # a lattice point this far below the mode (log scale) has no neighbours added
 _MOST_POINTS = 150
+_DROPPED_MASS = 1e-3
+_FLATTEST = 0.05  # smallest curvature of the log posterior taken at face value
 _DIFFERENCE = 0.02  # step in theta for the curvature from exact gradients
-_GRADIENT = 1e-3
+_GRADIENT = 0.02  # largest slope of the log posterior left at the mode
+_REMAINING = 1e-5  # squared distance to the mode left, in posterior standard deviations
+_FIRST_SCALE = 0.3  # a posterior variance of log hyperparameters that is about right
+_LONGEST = 1.0  # no step changes a hyperparameter by more than a factor e
+_MOST_STEPS = 60
+_HALVINGS = 12
 
 
 class State(Protocol):
@@ -144,22 +151,52 @@ class Posterior:
     warnings: tuple[str, ...]
 
 
-def infer(
+@dataclass(frozen=True, slots=True)
+class Peak:
+    """The mode of the hyperparameters and the curvature there.
+
+    Attributes
+    ----------
+    values : (d,) float
+        Free entries of theta.
+    log_posterior : float
+        Log-evidence plus log prior density.
+    state : State
+    basis : (d, d) float
+        Columns are the principal directions of the curvature, one posterior standard deviation long.
+    gradient_norm : float
+        What is left of the gradient, in posterior standard deviations.
+    evaluations : int
+    warnings : tuple of str
+    """
+
+    values: NDArray[np.float64]
+    log_posterior: float
+    state: Any
+    basis: NDArray[np.float64]
+    gradient_norm: float
+    evaluations: int
+    warnings: tuple[str, ...]
+
+    @property
+    def log_volume(self) -> float:
+        """Log of the volume of theta per unit volume in posterior standard deviations."""
+        return float(np.linalg.slogdet(self.basis)[1]) if self.values.size else 0.0
+
+
+def find_peak(
     engine: Engine,
     outer: Outer,
     *,
-    integrate: bool = True,
     start: NDArray[np.float64] | None = None,
     tick: Callable[[str], None] | None = None,
-) -> Posterior:
-    """Find the mode of the hyperparameters and integrate over them.
+) -> Peak:
+    """Find the mode of the hyperparameters and the curvature there.
 
     Parameters
     ----------
     engine : Engine
     outer : Outer
-    integrate : bool
-        False keeps the mode alone; the log-evidence then uses a Gaussian around it.
     start : (n_latent,) float, optional
         Latent vector to start the first Newton iteration from.
     tick : callable, optional
@@ -172,48 +209,80 @@ def infer(
     """
     search = _Search(engine, outer, start, tick)
     if not np.any(outer.free):
-        state = search.evaluate(np.zeros(0), "mode")[2]
-        return Posterior((state,), np.ones(1), state.log_evidence, state, {}, 1, 0.0, ())
+        value, _, state = search.evaluate(np.zeros(0), "mode")
+        return Peak(np.zeros(0), value, state, np.zeros((0, 0)), 0.0, search.count, ())
     mode = search.find_mode()
     value, gradient, best = search.evaluate(mode, "curvature")
-    precision = search.curvature(mode)
-    eigenvalues, vectors = np.linalg.eigh(precision)
-    warnings: list[str] = list(search.warnings)
-    if np.any(eigenvalues < 0.05):
+    eigenvalues, vectors = np.linalg.eigh(search.curvature(mode))
+    if np.any(eigenvalues < _FLATTEST):
         # A flat direction: its scale is capped so that the lattice stays where the priors mean something.
-        warnings.append(
+        search.warnings.append(
             "the posterior of the hyperparameters is nearly flat in one direction: the data say little about it"
         )
-        eigenvalues = np.maximum(eigenvalues, 0.05)
+        eigenvalues = np.maximum(eigenvalues, _FLATTEST)
     basis = vectors / np.sqrt(eigenvalues)
-    free = int(np.sum(outer.free))
     norm = float(np.sqrt(gradient @ (basis @ basis.T) @ gradient))
-    log_volume = -0.5 * float(np.sum(np.log(eigenvalues)))
-    if not integrate:
-        evidence = value + 0.5 * free * np.log(2.0 * np.pi) + log_volume
-        z = np.linspace(-4.0, 4.0, 401)
-        sd = np.sqrt(np.diag(basis @ basis.T))
-        density = np.exp(-0.5 * z**2) / np.sum(np.exp(-0.5 * z**2))
-        marginals = {
-            int(j): (mode[at] + sd[at] * z, density) for at, j in enumerate(np.flatnonzero(outer.free))
-        }
+    return Peak(mode, value, best, basis, norm, search.count, tuple(search.warnings))
+
+
+def infer(
+    engine: Engine,
+    outer: Outer,
+    peak: Peak,
+    *,
+    integrate: bool = True,
+    tick: Callable[[str], None] | None = None,
+) -> Posterior:
+    """Integrate over the hyperparameters, or keep their mode alone with a Gaussian around it.
+
+    Parameters
+    ----------
+    engine : Engine
+    outer : Outer
+    peak : Peak
+        From `find_peak`.
+    integrate : bool
+    tick : callable, optional
+        Called with the name of the stage after every evaluation; may raise to interrupt.
+    """
+    index = np.flatnonzero(outer.free)
+    if not index.size:
         return Posterior(
-            (best,), np.ones(1), evidence, best, marginals, search.count, norm, tuple(warnings)
+            (peak.state,), np.ones(1), peak.log_posterior, peak.state, {}, peak.evaluations, 0.0, ()
         )
-    points, values, states = search.lattice(mode, basis, value, best)
+    if not integrate:
+        evidence = peak.log_posterior + 0.5 * index.size * np.log(2.0 * np.pi) + peak.log_volume
+        z = np.linspace(-4.0, 4.0, 401)
+        sd = np.sqrt(np.diag(peak.basis @ peak.basis.T))
+        density = np.exp(-0.5 * z**2) / np.sum(np.exp(-0.5 * z**2))
+        marginals = {int(j): (peak.values[at] + sd[at] * z, density) for at, j in enumerate(index)}
+        return Posterior(
+            (peak.state,), np.ones(1), evidence, peak.state, marginals,
+            peak.evaluations, peak.gradient_norm, peak.warnings,
+        )  # fmt: skip
+    search = _Search(engine, outer, peak.state.mode, tick)
+    points, values, states = search.lattice(peak)
+    warnings = list(peak.warnings)
     if len(states) >= _MOST_POINTS:
         warnings.append(
             f"integration over the hyperparameters stopped at {_MOST_POINTS} points with tails still open"
         )
     top = float(np.max(values))
     mass = np.exp(values - top)
-    evidence = top + np.log(np.sum(mass)) + free * np.log(_STEP) + log_volume
-    marginals = _marginals(points, values, mode, basis, np.flatnonzero(outer.free))
-    for warning in warnings:
-        log.warning(warning)
+    evidence = top + np.log(np.sum(mass)) + index.size * np.log(_STEP) + peak.log_volume
+    kept = _carrying(mass)
     return Posterior(
-        tuple(states), mass / np.sum(mass), evidence, best, marginals, search.count, norm, tuple(warnings)
-    )
+        tuple(states[k] for k in kept), mass[kept] / np.sum(mass[kept]), evidence, peak.state,
+        _marginals(points, values, peak.values, peak.basis, index),
+        peak.evaluations + search.count, peak.gradient_norm, tuple(warnings),
+    )  # fmt: skip
+
+
+def _carrying(mass: NDArray[np.float64]) -> NDArray[np.int64]:
+    """Points that carry all but a thousandth of the mass, in their order; the others only cost time."""
+    order = np.argsort(-mass, kind="stable")
+    enough = int(np.searchsorted(np.cumsum(mass[order]), (1.0 - _DROPPED_MASS) * np.sum(mass))) + 1
+    return np.sort(order[:enough])
 
 
 class _Search:
@@ -247,29 +316,55 @@ class _Search:
         return state.log_evidence + prior, state.gradient[self.outer.free] + slope, state
 
     def find_mode(self) -> NDArray[np.float64]:
-        """Free entries at the mode of the log posterior."""
+        """Free entries at the mode of the log posterior, by BFGS with bounded steps."""
         outer = self.outer
+        lower, upper = outer.lower[outer.free], outer.upper[outer.free]
+        x = np.clip(outer.start[outer.free], lower, upper)
+        value, gradient, _ = self.evaluate(x, "mode")
+        inverse = _FIRST_SCALE * np.eye(x.size)
+        for _ in range(_MOST_STEPS):
+            ascent = inverse @ gradient
+            # A coordinate held by its bound does not keep the search going.
+            held = ((x <= lower) & (gradient < 0)) | ((x >= upper) & (gradient > 0))
+            ascent[held] = 0.0
+            remaining = float(gradient[~held] @ ascent[~held])
+            if remaining < _REMAINING and float(np.max(np.abs(gradient[~held]), initial=0.0)) < _GRADIENT:
+                return self._checked(x, lower, upper)
+            ascent *= min(1.0, _LONGEST / float(np.max(np.abs(ascent))))
+            length = 1.0
+            for _half in range(_HALVINGS):
+                trial = np.clip(x + length * ascent, lower, upper)
+                try:
+                    trial_value, trial_gradient, _ = self.evaluate(trial, "mode")
+                except FitError as error:
+                    # An extreme trial value may be out of reach numerically; a shorter step is not.
+                    log.debug("a trial value of the hyperparameters failed: %s", error)
+                else:
+                    if trial_value >= value + 1e-4 * float(gradient @ (trial - x)) - 1e-9 * abs(value):
+                        break
+                length *= 0.5
+            else:
+                raise FitError(
+                    f"the search for the mode of the hyperparameters stopped after {self.count} evaluations with "
+                    f"gradient {float(np.max(np.abs(gradient))):.3g}. Give tighter priors"
+                )
+            step, change = trial - x, gradient - trial_gradient
+            if float(step @ change) > 1e-10:
+                rho = 1.0 / float(step @ change)
+                left = np.eye(x.size) - rho * np.outer(step, change)
+                inverse = left @ inverse @ left.T + rho * np.outer(step, step)
+            x, value, gradient = trial, trial_value, trial_gradient
+        raise FitError(
+            f"no mode of the hyperparameters was found in {_MOST_STEPS} steps; the gradient is still "
+            f"{float(np.max(np.abs(gradient))):.3g}. Give tighter priors"
+        )
 
-        def objective(v: NDArray[np.float64]) -> tuple[float, NDArray[np.float64]]:
-            value, gradient, _ = self.evaluate(v, "mode")
-            return -value, -gradient
-
-        bounds = list(zip(outer.lower[outer.free], outer.upper[outer.free], strict=True))
-        result = minimize(
-            objective, outer.start[outer.free], jac=True, method="L-BFGS-B", bounds=bounds,
-            options={"gtol": _GRADIENT, "ftol": 1e-11, "maxiter": 60, "maxls": 30},
-        )  # fmt: skip
-        x = np.asarray(result.x, dtype=float)
-        if not np.isfinite(result.fun):
-            raise FitError(f"no mode of the hyperparameters was found: {result.message}")
-        if not result.success and float(np.max(np.abs(result.jac))) > 0.05:
-            raise FitError(
-                f"the search for the mode of the hyperparameters stopped after {self.count} evaluations with "
-                f"gradient {float(np.max(np.abs(result.jac))):.3g}: {result.message}. Give tighter priors"
-            )
-        names = np.array(["range_km", "sd", "nugget_sd"])[outer.free]
-        for name, v, (lo, hi) in zip(names, x, bounds, strict=True):
-            if v <= lo + 1e-6 or v >= hi - 1e-6:
+    def _checked(
+        self, x: NDArray[np.float64], lower: NDArray[np.float64], upper: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        names = np.array(["range_km", "sd", "nugget_sd"])[self.outer.free]
+        for name, v, lo, hi in zip(names, x, lower, upper, strict=True):
+            if v <= lo or v >= hi:
                 self.warnings.append(
                     f"{name} came to rest at the end of what was searched ({np.exp(v):.3g}): check its prior"
                 )
@@ -288,26 +383,24 @@ class _Search:
             out[j] = -(up - down) / (2.0 * _DIFFERENCE)
         return 0.5 * (out + out.T)
 
-    def lattice(
-        self, mode: NDArray[np.float64], basis: NDArray[np.float64], value: float, best: Any
-    ) -> tuple[NDArray[np.float64], NDArray[np.float64], list[Any]]:
+    def lattice(self, peak: Peak) -> tuple[NDArray[np.float64], NDArray[np.float64], list[Any]]:
         """Points z on the lattice, their log posterior and states, grown from the mode outward."""
-        d = mode.size
+        d = peak.values.size
+        lower, upper = self.outer.lower[self.outer.free], self.outer.upper[self.outer.free]
         origin = (0,) * d
-        values = {origin: value}
-        states = {origin: best}
+        values = {origin: peak.log_posterior}
+        states = {origin: peak.state}
         queue = [origin]
         while queue and len(states) < _MOST_POINTS:
             parent = queue.pop(0)
-            if values[parent] < value - _DROP:
+            if values[parent] < peak.log_posterior - _DROP:
                 continue
             for j, side in itertools.product(range(d), (-1, 1)):
                 child = tuple(c + side * (i == j) for i, c in enumerate(parent))
                 if child in values or len(states) >= _MOST_POINTS:
                     continue
-                at = mode + basis @ (_STEP * np.array(child))
-                inside = np.all((at > self.outer.lower[self.outer.free]) & (at < self.outer.upper[self.outer.free]))
-                if not inside:
+                at = peak.values + peak.basis @ (_STEP * np.array(child))
+                if not np.all((at > lower) & (at < upper)):
                     continue
                 values[child], _, states[child] = self.evaluate(at, "integration", states[parent].mode)
                 queue.append(child)
@@ -335,8 +428,8 @@ def _marginals(
     fine_step = 0.1 if d == 1 else 0.25
     axes = [np.arange(points[:, j].min() - _STEP / 2, points[:, j].max() + _STEP, fine_step) for j in range(d)]
     fine = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, d)
-    near = np.min(np.max(np.abs(fine[:, None, :] - points[None]), axis=2), axis=1) <= _STEP / 2 + 1e-9
-    fine = fine[near]
+    distance, _ = cKDTree(points).query(fine, p=np.inf)
+    fine = fine[distance <= _STEP / 2 + 1e-9]
     spread = np.all(np.ptp(points, axis=0) > _STEP * 1.5)
     degree = 2 if len(points) > needed and spread else 1
     density = RBFInterpolator(points, values - values.max(), kernel="cubic", degree=degree)(fine)

@@ -20,7 +20,7 @@ from tqdm.auto import tqdm
 from prevmap.engine.exact import DenseModel
 from prevmap.engine.laplace import LatentModel
 from prevmap.engine.mesh import projector
-from prevmap.engine.posterior import Engine, Outer, Posterior, infer, weighted_quantile
+from prevmap.engine.posterior import Engine, Outer, Peak, Posterior, find_peak, infer, weighted_quantile
 from prevmap.errors import InputError
 from prevmap.inputs.design import Design, design
 from prevmap.inputs.findings import Finding, findings_frame
@@ -302,36 +302,35 @@ def _run(
             )
         core: Engine = DenseModel(rows.data, rows.xy_km, rows.design, mean, sd, model.nu)
         shortest = spacing / 100.0 if math.isfinite(spacing) else diagonal / 1000.0
-        posterior = infer(core, _outer(rows, resolved, shortest, diagonal), integrate=integrate, tick=tick)
+        outer = _outer(rows, resolved, shortest, diagonal)
+        posterior = infer(core, outer, find_peak(core, outer, tick=tick), integrate=integrate, tick=tick)
         shape = {"nodes": 0, "edge_km": math.nan, "margin_km": math.nan}
         return core, posterior, shape, list(posterior.warnings)
     zone = meshing.inner_zone_km(region.boundary, rows.xy_km)
     edge = model.mesh.edge_km or meshing.default_edge_km(zone, resolved[0].middle, spacing)
-    posterior = None
+    peak: Peak | None = None
     remeshed = False
     while True:
         mesh = meshing.mesh_over(zone, edge, margin_km, model.mesh.max_nodes)
-        weights, on_mesh = projector(mesh, rows.xy_km)
-        if not np.all(on_mesh):
-            raise InputError(f"{int(np.sum(~on_mesh))} sites lie off the mesh")
+        weights, _ = projector(mesh, rows.xy_km)
         core = LatentModel(rows.data, mesh, weights, rows.design, mean, sd)
-        outer = _outer(rows, resolved, edge / 2.0, diagonal, posterior)
-        posterior = infer(core, outer, integrate=integrate, tick=tick)
-        warnings = list(posterior.warnings)
-        lower, middle = _range_limits(posterior)
-        coarse = edge > lower / _EDGES_PER_LOWER_RANGE * 1.001
-        narrow = margin_km < middle * 0.999
-        finer = _finer_edge(model, zone, lower, edge) if coarse else edge
-        wider = float(f"{1.25 * middle:.3g}") if narrow and model.mesh.margin_km is None else margin_km
+        outer = _outer(rows, resolved, edge / 2.0, diagonal, peak)
+        peak = find_peak(core, outer, tick=tick)
+        lower, middle = _range_limits(infer(core, outer, peak, integrate=False))
+        finer = _finer_edge(model, zone, lower, edge)
+        wider = float(f"{1.25 * middle:.3g}") if margin_km < middle and model.mesh.margin_km is None else margin_km
         if remeshed or (finer == edge and wider == margin_km):
             break
         edge, margin_km, remeshed = finer, wider, True
-    if coarse:
+    posterior = infer(core, outer, peak, integrate=integrate, tick=tick)
+    lower, middle = _range_limits(posterior)
+    warnings = list(posterior.warnings)
+    if edge > lower / _EDGES_PER_LOWER_RANGE * 1.001:
         warnings.append(
             f"the mesh edge of {edge:.3g} km is above a fifth of the range's lower limit ({lower:.3g} km): "
             "short-range variation is blurred; a finer edge_km would show it"
         )
-    if narrow:
+    if margin_km < middle * 0.999:
         warnings.append(
             f"the mesh margin of {margin_km:.3g} km is below the fitted range ({middle:.3g} km): uncertainty near "
             "the border is overstated; a larger margin_km would mend it"
@@ -344,7 +343,7 @@ def _run(
 
 def _finer_edge(model: PrevalenceModel, zone: Any, lower: float, edge: float) -> float:
     """Edge for a second mesh: a fifth of the range's lower limit, as far as nodes allow."""
-    if model.mesh.edge_km is not None:
+    if model.mesh.edge_km is not None or edge <= lower / _EDGES_PER_LOWER_RANGE:
         return edge
     most = min(meshing.REFINED_NODES, model.mesh.max_nodes // 2)
     finer = meshing.default_edge_km(zone, meshing.EDGES_PER_RANGE * lower / _EDGES_PER_LOWER_RANGE, math.inf, most)
@@ -367,7 +366,7 @@ def _outer(
     resolved: tuple[Resolved, Resolved, Resolved],
     shortest_km: float,
     diagonal_km: float,
-    before: Posterior | None = None,
+    before: Peak | None = None,
 ) -> Outer:
     """Outer problem started at moment estimates, or at the mode found on an earlier mesh."""
     free = np.array([r.free for r in resolved])
@@ -375,7 +374,7 @@ def _outer(
     lower = np.log([shortest_km, _SD_BOUNDS[0], _NUGGET_BOUNDS[0]])
     upper = np.log([100.0 * max(diagonal_km, shortest_km), _SD_BOUNDS[1], _NUGGET_BOUNDS[1]])
     if before is not None:
-        theta = before.mode.theta
+        theta = before.state.theta
         start = np.array([theta.log_range, theta.log_sd, theta.log_nugget])
     else:
         n, y = rows.data.examined, rows.data.positive

@@ -13,7 +13,7 @@ from scipy.spatial import cKDTree
 from prevmap.engine.mesh import Mesh, check_node_cap, equilateral_lattice, grade_mesh
 
 DEFAULT_NODES = 4_000  # a default edge asks for no more nodes than this in the region
-REFINED_NODES = 20_000  # and no more than this after a look at the fitted range
+REFINED_NODES = 6_000  # and no more than this after a look at the fitted range
 EDGES_PER_RANGE = 10.0
 
 
