@@ -712,3 +712,19 @@ def test_the_order_of_rows_changes_no_row(order, data):
     single = first.findings.dropna(subset=["row"])
     again = second.findings.dropna(subset=["row"])
     assert sorted(map(tuple, single.to_numpy())) == sorted(map(tuple, again.to_numpy()))
+
+
+def test_the_origin_of_a_projected_system_is_a_place_where_sites_lie_round_it():
+    crs = "+proj=laea +lat_0=5 +lon_0=20 +datum=WGS84 +units=m"
+    table = {"examined": [10, 20, 30], "positive": [1, 2, 3]}
+
+    def read(x, y):
+        frame = gpd.GeoDataFrame(table, geometry=gpd.points_from_xy(x, y), crs=crs)
+        return prevmap.Survey.from_frame(frame, examined="examined", positive="positive")
+
+    near = read([0.0, 4e3, -5e3], [0.0, 3e3, 2e3])
+    assert len(near.frame) == 3
+    assert near.findings["severity"].tolist() == ["warning"]
+    far = read([0.0, 504e3, 505e3], [0.0, 403e3, 402e3])
+    assert len(far.frame) == 2
+    assert "not taken" in far.findings["what"].iloc[0]

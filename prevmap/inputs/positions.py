@@ -39,6 +39,13 @@ def position_remarks(xy: NDArray[np.float64], crs: CRS, fields: tuple[str, str])
     remarks: list[Remark] = []
     known = np.asarray(~np.isnan(xy).any(axis=1))
     zero = known & np.asarray((np.abs(xy) < 1e-9).all(axis=1))
+    if not crs.is_geographic and _origin_is_among(
+        xy[known & ~zero], OUTLIER_FLOOR["projected"] / _metres_per_unit(crs)
+    ):
+        for at in np.flatnonzero(zero).tolist():
+            what = "the position is (0, 0): a place among the other sites, or one that was not taken"
+            remarks.append(Remark(at, "position", "warning", what, "used as it is; check the position"))
+        zero[:] = False
     for at in np.flatnonzero(zero).tolist():
         what = (
             f"the position is ({xy[at, 0]:g}, {xy[at, 1]:g}), which stands for a position that was not taken"
@@ -105,6 +112,15 @@ def _known_crs(text: str) -> CRS | None:
         return CRS.from_user_input(int(text) if text.isdecimal() else text)
     except CRSError:
         return None
+
+
+def _origin_is_among(others: NDArray[np.float64], floor: float) -> bool:
+    """Whether the origin of a projected coordinate system is where a survey could be."""
+    if not len(others):
+        return True
+    centre = np.median(others, axis=0)
+    radius = float(np.median(np.hypot(*(others - centre).T)))
+    return float(np.hypot(*centre)) <= max(OUTLIER_RADII * radius, floor)
 
 
 def _impossible_degrees(
