@@ -48,7 +48,7 @@ _ROOM_OF = {
     "read_study": "study",
 }
 
-__all__ = ["__version__", *_ROOM_OF]  # noqa: PLE0604 - the names come from the table above
+__all__ = ["__version__", *_ROOM_OF]
 
 
 def __getattr__(name: str) -> Any:

@@ -6,10 +6,11 @@ from pathlib import Path
 import geopandas as gpd
 import numpy as np
 import pandas as pd
-import prevmap
 import pytest
 import statsmodels.api as sm
 from scipy.special import expit
+
+import prevmap
 
 DATA = Path(__file__).parent / "data"
 METRES = "+proj=laea +lat_0=0 +lon_0=0 +datum=WGS84 +units=m"
@@ -79,7 +80,11 @@ def test_worked_laplace_values_with_correlated_sites():
 def test_county_births_reproduce_the_reference_fits(row, nu):
     """Cressie & Read (1985) data; reference values computed by two independent codes (tests/data/README.md)."""
     with (DATA / "nc" / "nc_reference_fits.csv").open() as file:
-        wanted = {r["parameter"]: float(r["value"]) for r in csv.DictReader(file) if r["model_id"] == row and "exact" not in r["model"]}
+        wanted = {
+            r["parameter"]: float(r["value"])
+            for r in csv.DictReader(file)
+            if r["model_id"] == row and "exact" not in r["model"]
+        }
     counties = pd.read_csv(DATA / "nc" / "nc_sids.csv")
     survey = survey_of(counties[["x_km", "y_km"]], counties["births_74"], counties["sids_74"], KILOMETRES)
     priors = fixed(np.sqrt(8 * nu) * wanted["phi"], np.sqrt(wanted["sigma2"]), wanted["intercept"])
@@ -109,7 +114,9 @@ def test_splitting_shuffling_and_units_change_nothing(engine, rng):
     xy, examined, positive, x = simulated(n=40)
     site = np.array([f"s{i}" for i in range(40)])
     model = prevmap.PrevalenceModel(
-        [prevmap.ColumnCovariate("x")], priors=prevmap.Priors(range_km=30.0), mesh=prevmap.MeshSpec(edge_km=6.0)
+        [prevmap.ColumnCovariate("x")],
+        priors=prevmap.Priors(range_km=30.0),
+        mesh=prevmap.MeshSpec(edge_km=6.0),
     )
     whole = model.fit(survey_of(xy, examined, positive, x=x, site=site), engine=engine)
     first, part = examined // 2, np.minimum(positive // 3, examined // 2)
@@ -148,10 +155,14 @@ def test_mesh_and_dense_engines_agree_when_everything_is_estimated():
     assert np.log(mesh.hyperparameters["median"]).to_numpy() == pytest.approx(
         np.log(dense.hyperparameters["median"]).to_numpy(), abs=0.06
     )
-    assert mesh.log_evidence == pytest.approx(dense.log_evidence, abs=0.2)  # a Bayes factor of 1.2 decides nothing
+    assert mesh.log_evidence == pytest.approx(
+        dense.log_evidence, abs=0.2
+    )  # a Bayes factor of 1.2 decides nothing
     shift = (mesh.coefficients["mean"] - dense.coefficients["mean"]) / dense.coefficients["sd"]
     assert np.max(np.abs(shift)) < 0.05  # posterior standard deviations, from the mesh
-    points = gpd.GeoDataFrame({"x": [0.0, 1.0]}, geometry=gpd.points_from_xy([20, 60], [30, 50]), crs=KILOMETRES)
+    points = gpd.GeoDataFrame(
+        {"x": [0.0, 1.0]}, geometry=gpd.points_from_xy([20, 60], [30, 50]), crs=KILOMETRES
+    )
     a, b = mesh.predict(points), dense.predict(points)
     assert np.max(np.abs(a.exceedance(0.25) - b.exceedance(0.25))) < 0.03  # the mesh, as above
 
@@ -174,7 +185,9 @@ def test_evidence_integrates_the_prior():
     top = max(values)
     brute = top + np.log(np.sum(np.exp(np.array(values) - top)) * (log_sd[1] - log_sd[0]))
     fit = model(prevmap.Above(2.0, 0.05)).fit(survey, engine="exact")
-    assert fit.log_evidence == pytest.approx(brute, abs=0.01)  # a trapezoid of step 1.5 sd on a skewed density
+    assert fit.log_evidence == pytest.approx(
+        brute, abs=0.01
+    )  # a trapezoid of step 1.5 sd on a skewed density
     weight = np.exp(np.array(values) - top)
     cumulative = np.cumsum(weight) / np.sum(weight)
     median = np.exp(np.interp(0.5, cumulative - 0.5 * weight / weight.sum(), log_sd))
@@ -186,11 +199,17 @@ def test_evidence_integrates_the_prior():
 
 def test_a_known_truth_is_recovered():
     xy, examined, positive, x = simulated(seed=11, n=120)
-    fit = prevmap.PrevalenceModel([prevmap.ColumnCovariate("x", scale=False)]).fit(survey_of(xy, examined, positive, x=x))
+    fit = prevmap.PrevalenceModel([prevmap.ColumnCovariate("x", scale=False)]).fit(
+        survey_of(xy, examined, positive, x=x)
+    )
     row = fit.coefficients.loc["x"]
     assert row["lower95"] < 0.5 < row["upper95"]
     assert row["sd"] < 0.15  # the covariate is not lost in the field
-    assert fit.hyperparameters.loc["nugget_sd", "lower95"] < 0.3 < fit.hyperparameters.loc["nugget_sd", "upper95"]
+    assert (
+        fit.hyperparameters.loc["nugget_sd", "lower95"]
+        < 0.3
+        < fit.hyperparameters.loc["nugget_sd", "upper95"]
+    )
 
 
 def test_test_accuracy_moves_prevalence_towards_the_truth():
@@ -198,13 +217,20 @@ def test_test_accuracy_moves_prevalence_towards_the_truth():
     survey = survey_of(xy, examined, positive, test=["smear"] * 50)
     about = prevmap.SurveyNotes(test="smear")
     survey = prevmap.Survey.from_frame(
-        survey.frame[["examined", "positive", "geometry"]], examined="examined", positive="positive", about=about
+        survey.frame[["examined", "positive", "geometry"]],
+        examined="examined",
+        positive="positive",
+        about=about,
     )
     plain = prevmap.PrevalenceModel([]).fit(survey)
-    insensitive = prevmap.PrevalenceModel([], tests={"smear": prevmap.DiagnosticAccuracy(0.6, 1.0)}).fit(survey)
+    insensitive = prevmap.PrevalenceModel([], tests={"smear": prevmap.DiagnosticAccuracy(0.6, 1.0)}).fit(
+        survey
+    )
     where = gpd.GeoDataFrame(geometry=gpd.points_from_xy([40.0], [40.0]), crs=KILOMETRES)
     ratio = insensitive.predict(where).median[0] / plain.predict(where).median[0]
-    assert ratio == pytest.approx(1 / 0.6, rel=0.1)  # Rogan & Gladen (1978): apparent over sensitivity, at Sp = 1
+    assert ratio == pytest.approx(
+        1 / 0.6, rel=0.1
+    )  # Rogan & Gladen (1978): apparent over sensitivity, at Sp = 1
     unknown = prevmap.PrevalenceModel([], tests={"other": prevmap.DiagnosticAccuracy(0.6, 1.0)})
     with pytest.raises(prevmap.InputError, match="'other', which no row of the survey used; found: 'smear'"):
         unknown.fit(survey)
@@ -219,7 +245,9 @@ def test_a_default_mesh_is_made_again_where_the_range_asks_for_it():
     priors = prevmap.Priors(range_km=prevmap.Below(30, 0.05))
     refined = prevmap.PrevalenceModel([], priors=priors).fit(survey, integrate=False)
     lower = refined.hyperparameters.loc["range_km", "lower95"]
-    coarse = prevmap.PrevalenceModel([], priors=priors, mesh=prevmap.MeshSpec(edge_km=8.0)).fit(survey, integrate=False)
+    coarse = prevmap.PrevalenceModel([], priors=priors, mesh=prevmap.MeshSpec(edge_km=8.0)).fit(
+        survey, integrate=False
+    )
     assert coarse.diagnostics["edge_km"] == 8.0  # a stated edge is kept, with a warning
     assert any("a fifth of the range's lower limit" in w for w in coarse.warnings)
     assert refined.diagnostics["edge_km"] < 8.0
@@ -264,7 +292,14 @@ def test_a_fit_prints_what_makes_it_trustworthy():
     xy, examined, positive, _ = simulated(n=30)
     fit = prevmap.PrevalenceModel([]).fit(survey_of(xy, examined, positive))
     text = repr(fit)
-    for word in ("examined at 30 sites", "log-evidence", "gradient", "smallest pivot", "range_km", "intercept"):
+    for word in (
+        "examined at 30 sites",
+        "log-evidence",
+        "gradient",
+        "smallest pivot",
+        "range_km",
+        "intercept",
+    ):
         assert word in text
     assert dict(fit.prior_text)["range_km"].endswith("(default: 5 % of the study area's diagonal)")
     told = []

@@ -13,7 +13,9 @@ from prevmap.engine.mesh import equilateral_lattice, grade_mesh, projector
 from prevmap.errors import FitError
 
 NO_NUGGET = -np.inf
-TIGHT = 1e-5  # sd of an intercept that is as good as fixed; its variance of 1e-10 moves log Z by less than 1e-9
+TIGHT = (
+    1e-5  # sd of an intercept that is as good as fixed; its variance of 1e-10 moves log Z by less than 1e-9
+)
 
 
 def one_site(y, n, sd, intercept, se=1.0, sp=1.0):
@@ -48,7 +50,7 @@ def test_one_site_gradient_in_log_sd():
 
 def test_one_site_with_an_imperfect_test():
     # 3/10 and 1/20 with Se 0.8, Sp 0.95; computed independently with 30-digit arithmetic.
-    model, state = one_site(3, 10, 1.0, 0.0, 0.8, 0.95)
+    _, state = one_site(3, 10, 1.0, 0.0, 0.8, 0.95)
     assert state.log_evidence == pytest.approx(-1.899410554312, abs=1e-8)
     assert (1.0 + TIGHT**2) * state.mode[0] == pytest.approx(-0.401372857723, abs=1e-8)
     assert state.curvature[0] == pytest.approx(1.409813651976, abs=1e-8)
@@ -152,7 +154,9 @@ def test_sparse_algebra_equals_its_dense_twin(rng):
     start, block = data.site_start, data.block_start
     for s in range(start.size - 1):
         k = start[s + 1] - start[s]
-        W[start[s] : start[s + 1], start[s] : start[s + 1]] = state.curvature[block[s] : block[s + 1]].reshape(k, k)
+        W[start[s] : start[s + 1], start[s] : start[s + 1]] = state.curvature[
+            block[s] : block[s + 1]
+        ].reshape(k, k)
     H = P + B.T @ W @ B
     terms = lk.evaluate(data, B @ state.mode, theta.nugget_sd)
     expected = terms.value - 0.5 * state.mode @ P @ state.mode
@@ -166,7 +170,9 @@ def test_sparse_algebra_equals_its_dense_twin(rng):
         b[np.arange(50), rows.nodes[:, a]] += rows.weights[:, a]
     b[:, m:] = rows.design
     mean, variance = model.moments(state, rows)
-    np.testing.assert_allclose(variance, np.einsum("ij,jk,ik->i", b, inverse, b), rtol=1e-8)  # order 200 inverse
+    np.testing.assert_allclose(
+        variance, np.einsum("ij,jk,ik->i", b, inverse, b), rtol=1e-8
+    )  # order 200 inverse
     np.testing.assert_allclose(mean, b @ (state.mode + state.mean_shift), rtol=ALGEBRA, atol=ALGEBRA)
     np.testing.assert_allclose(model.coefficients(state)[1], inverse[m:, m:], rtol=1e-8)
 
@@ -184,7 +190,10 @@ def test_mesh_converges_to_the_dense_engine(rng, capsys):
         model = mesh_model(data, xy, design, edge)
         mean, variance = model.moments(model.laplace(theta), model.locate(points, covariates))
         errors.append(
-            (np.mean(np.abs(mean - mean0) / np.sqrt(variance0)), np.mean(np.abs(np.sqrt(variance / variance0) - 1)))
+            (
+                np.mean(np.abs(mean - mean0) / np.sqrt(variance0)),
+                np.mean(np.abs(np.sqrt(variance / variance0) - 1)),
+            )
         )
     (mean8, sd8), (mean16, sd16) = errors
     slope = np.log2(mean8 / mean16), np.log2(sd8 / sd16)

@@ -67,7 +67,9 @@ def test_without_nugget_it_is_the_binomial_of_scipy():
 )
 def test_observed_information_of_an_imperfect_test_can_be_negative(eta, score, observed):
     # 3 of 10 with Se 0.8, Sp 0.95; computed independently with 30-digit arithmetic.
-    terms = lk.evaluate(lk.observations(np.array([10.0]), np.array([3.0]), None, 0.8, 0.95), np.array([eta]), 0.0)
+    terms = lk.evaluate(
+        lk.observations(np.array([10.0]), np.array([3.0]), None, 0.8, 0.95), np.array([eta]), 0.0
+    )
     assert terms.gradient[0] == pytest.approx(score, abs=1e-11)  # 12 digits printed
     assert terms.curvature[0] == pytest.approx(observed, abs=1e-11)
 
@@ -97,7 +99,10 @@ def test_derivatives_equal_central_differences(rng, se, sp, nugget_sd):
         third = -((up.curvature - down.curvature) @ covariance) / (2 * h)
         assert higher.third[i] == pytest.approx(third, rel=GRADIENT, abs=1e-6)
     if nugget_sd > 0:
-        up, down = lk.evaluate(data, eta, nugget_sd * np.exp(h)), lk.evaluate(data, eta, nugget_sd * np.exp(-h))
+        up, down = (
+            lk.evaluate(data, eta, nugget_sd * np.exp(h)),
+            lk.evaluate(data, eta, nugget_sd * np.exp(-h)),
+        )
         assert higher.nugget_value == pytest.approx((up.value - down.value) / (2 * h), rel=GRADIENT, abs=1e-6)
         difference = (up.gradient - down.gradient) / (2 * h)
         assert higher.nugget_gradient == pytest.approx(difference, rel=GRADIENT, abs=1e-6)
@@ -106,7 +111,11 @@ def test_derivatives_equal_central_differences(rng, se, sp, nugget_sd):
 
 
 @given(
-    n=st.integers(2, 200), share=st.floats(0, 1), split=st.floats(0, 1), eta=st.floats(-5, 3), s=st.floats(0.05, 2)
+    n=st.integers(2, 200),
+    share=st.floats(0, 1),
+    split=st.floats(0, 1),
+    eta=st.floats(-5, 3),
+    s=st.floats(0.05, 2),
 )
 def test_splitting_a_row_changes_only_the_binomial_constant(n, share, split, eta, s):
     y = round(share * n)
@@ -118,7 +127,9 @@ def test_splitting_a_row_changes_only_the_binomial_constant(n, share, split, eta
     parts = lk.observations(np.array([first, n - first]), np.array([y1, y - y1]), np.array([0, 0]))
     a = lk.evaluate(whole, np.array([eta]), s).value - whole.log_constant
     b = lk.evaluate(parts, np.array([eta, eta]), s).value - parts.log_constant
-    assert a == pytest.approx(b, rel=1e-9, abs=1e-9)  # two quadratures with the same nodes, summed in another order
+    assert a == pytest.approx(
+        b, rel=1e-9, abs=1e-9
+    )  # two quadratures with the same nodes, summed in another order
 
 
 def test_log_constant_is_the_sum_of_binomial_coefficients():

@@ -46,7 +46,9 @@ def test_logit_normal_moments(mu, sd, mean, spread, median):
 def test_average_over_settlements_equals_quadrature(nugget_sd, eta):
     exact = quad(lambda z: expit(eta + nugget_sd * z) * norm.pdf(z), -12, 12, epsrel=1e-12, epsabs=1e-16)[0]
     tables = pv.links(np.array([nugget_sd]), "average")
-    assert pv.prevalence_of(tables.forward[0], np.array([[eta]]))[0, 0] == pytest.approx(exact, rel=1e-8)  # table
+    assert pv.prevalence_of(tables.forward[0], np.array([[eta]]))[0, 0] == pytest.approx(
+        exact, rel=1e-8
+    )  # table
 
 
 @given(eta=st.floats(-15, 15), nugget_sd=st.floats(0.05, 3))
@@ -90,7 +92,11 @@ def test_exceedance_and_quantiles_of_a_mixture_agree_with_draws(rng):
 
 
 @given(
-    mu=st.floats(-6, 3), sd=st.floats(0.01, 2), s=st.floats(0, 2), low=st.floats(0.001, 0.5), step=st.floats(0.001, 0.4)
+    mu=st.floats(-6, 3),
+    sd=st.floats(0.01, 2),
+    s=st.floats(0, 2),
+    low=st.floats(0.001, 0.5),
+    step=st.floats(0.001, 0.4),
 )
 def test_exceedance_falls_with_the_threshold_and_agrees_with_the_quantile(mu, sd, s, low, step):
     m = mixture([mu], [sd], [s])

@@ -39,7 +39,9 @@ def test_the_same_pattern_is_refactorised_with_new_numbers():
     factorize = Factorizer(upper)
     factorize(upper)
     other = upper.copy()
-    other.data = upper.data * np.where(upper.indices == np.repeat(np.arange(60), np.diff(upper.indptr)), 3.0, 0.5)
+    other.data = upper.data * np.where(
+        upper.indices == np.repeat(np.arange(60), np.diff(upper.indptr)), 3.0, 0.5
+    )
     full = other.toarray()
     full = full + full.T - np.diag(np.diag(full))
     assert factorize(other).log_determinant == pytest.approx(np.linalg.slogdet(full)[1], rel=ALGEBRA)

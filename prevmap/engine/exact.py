@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -126,8 +127,7 @@ class DenseModel:
 
     def _gather(self, covariance: NDArray[np.float64]) -> NDArray[np.float64]:
         start = self.data.site_start
-        pairs = zip(start[:-1], start[1:], strict=True)
-        return np.concatenate([covariance[a:b, a:b].ravel() for a, b in pairs])
+        return np.concatenate([covariance[a:b, a:b].ravel() for a, b in pairwise(start)])
 
     def _field(self, theta: Theta) -> NDArray[np.float64]:
         return theta.sd**2 * correlation(self._distance, theta.range_km, self.nu)
@@ -198,7 +198,9 @@ class DenseModel:
             gradient[at] = 0.5 * float(a @ dS @ a) - 0.5 * float(np.sum(R * dS.T)) + float(shift @ (dS @ a))
         if np.isfinite(theta.log_nugget):
             gradient[2] = (
-                higher.nugget_value + 0.5 * higher.nugget_hessian + float(shift @ (S @ higher.nugget_gradient))
+                higher.nugget_value
+                + 0.5 * higher.nugget_hessian
+                + float(shift @ (S @ higher.nugget_gradient))
             )
         return DenseState(
             theta, a, log_evidence, gradient, shift, terms.curvature, steps, reduction.smallest_pivot
@@ -231,7 +233,9 @@ class DenseModel:
         eigenvalues = np.linalg.eigvalsh(information)
         if not peaked or eigenvalues[0] <= 0:
             raise FitError("the posterior is not peaked at the mode: its Hessian is not positive definite")
-        log_determinant = float(np.sum(np.log(np.abs(pivots)))) + float(np.sum(np.log(self.coefficient_variance)))
+        log_determinant = float(np.sum(np.log(np.abs(pivots)))) + float(
+            np.sum(np.log(self.coefficient_variance))
+        )
         log_determinant += float(np.linalg.slogdet(information)[1])
         coefficients = np.linalg.inv(information)
         reach = lu_solve(lu, X)  # (I + K W)^-1 X

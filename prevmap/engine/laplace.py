@@ -198,12 +198,18 @@ class LatentModel:
         """Rows (first, second) of one site with latent entries (left, right) and products of their weights."""
         start, B = self.data.site_start, self.B
         size = np.diff(start)
-        first = np.concatenate([np.repeat(np.arange(a, a + k), k) for a, k in zip(start[:-1], size, strict=True)])
-        second = np.concatenate([np.tile(np.arange(a, a + k), k) for a, k in zip(start[:-1], size, strict=True)])
+        first = np.concatenate(
+            [np.repeat(np.arange(a, a + k), k) for a, k in zip(start[:-1], size, strict=True)]
+        )
+        second = np.concatenate(
+            [np.tile(np.arange(a, a + k), k) for a, k in zip(start[:-1], size, strict=True)]
+        )
         count = np.diff(B.indptr)
         n_left, n_right = count[first], count[second]
         pair = np.repeat(np.arange(first.size), n_left * n_right)
-        offset = np.arange(pair.size) - np.repeat(np.cumsum(n_left * n_right) - n_left * n_right, n_left * n_right)
+        offset = np.arange(pair.size) - np.repeat(
+            np.cumsum(n_left * n_right) - n_left * n_right, n_left * n_right
+        )
         at_left = B.indptr[first[pair]] + offset // n_right[pair]
         at_right = B.indptr[second[pair]] + offset % n_right[pair]
         value = B.data[at_left] * B.data[at_right]

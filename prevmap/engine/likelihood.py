@@ -95,7 +95,9 @@ def observations(
         raise ValueError(f"examined {n.shape} and positive {y.shape} must be two equally long vectors")
     if not (np.all(n > 0) and np.all((y >= 0) & (y <= n))):
         bad = np.flatnonzero(~((n > 0) & (y >= 0) & (y <= n)))[:5]
-        raise ValueError(f"counts must satisfy 0 <= positive <= examined and examined > 0; rows {bad.tolist()}")
+        raise ValueError(
+            f"counts must satisfy 0 <= positive <= examined and examined > 0; rows {bad.tolist()}"
+        )
     code = np.arange(n.size) if site is None else np.asarray(site)
     if np.any(np.diff(code) < 0):
         raise ValueError("rows must be ordered by site")

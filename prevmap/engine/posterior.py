@@ -24,7 +24,9 @@ from prevmap.errors import FitError
 
 log = logging.getLogger("prevmap")
 
-_STEP = 1.5  # lattice step in posterior standard deviations: trapezoid error about 2 exp(-2 pi^2/step^2) = 3e-4
+_STEP = (
+    1.5  # lattice step in posterior standard deviations: trapezoid error about 2 exp(-2 pi^2/step^2) = 3e-4
+)
 _DROP = 2.5  # a lattice point this far below the mode (log scale) has no neighbours added
 _MOST_POINTS = 150
 _DROPPED_MASS = 1e-3
@@ -304,9 +306,7 @@ class _Search:
         self, free_values: NDArray[np.float64], stage: str, start: NDArray[np.float64] | None = None
     ) -> tuple[float, NDArray[np.float64], Any]:
         """Log posterior, its gradient in the free entries, and the state."""
-        state = self.engine.laplace(
-            self.outer.theta(free_values), self.latest if start is None else start
-        )
+        state = self.engine.laplace(self.outer.theta(free_values), self.latest if start is None else start)
         self.count += 1
         if start is None:
             self.latest = state.mode
@@ -426,7 +426,9 @@ def _marginals(
     d = points.shape[1]
     needed = (d + 1) * (d + 2) // 2
     fine_step = 0.1 if d == 1 else 0.25
-    axes = [np.arange(points[:, j].min() - _STEP / 2, points[:, j].max() + _STEP, fine_step) for j in range(d)]
+    axes = [
+        np.arange(points[:, j].min() - _STEP / 2, points[:, j].max() + _STEP, fine_step) for j in range(d)
+    ]
     fine = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, d)
     distance, _ = cKDTree(points).query(fine, p=np.inf)
     fine = fine[distance <= _STEP / 2 + 1e-9]
@@ -439,9 +441,7 @@ def _marginals(
     return {int(j): (theta[:, at], weight) for at, j in enumerate(index)}
 
 
-def weighted_quantile(
-    values: NDArray[np.float64], weights: NDArray[np.float64], probability: float
-) -> float:
+def weighted_quantile(values: NDArray[np.float64], weights: NDArray[np.float64], probability: float) -> float:
     """Quantile of a fine discrete distribution, each atom spread over its place in the order."""
     order = np.argsort(values, kind="stable")
     cumulative = np.cumsum(weights[order]) - 0.5 * weights[order]

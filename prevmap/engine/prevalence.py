@@ -12,9 +12,8 @@ found without Monte-Carlo error.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import math
+from dataclasses import dataclass
 
 import numpy as np
 from numba import njit

@@ -183,7 +183,9 @@ class Factorizer:
         try:
             self._solver.update(upper, upper=True)
         except (RuntimeError, ValueError) as error:
-            raise FitError(f"a precision matrix of order {upper.shape[0]} has a zero pivot: {error}") from error
+            raise FitError(
+                f"a precision matrix of order {upper.shape[0]} has a zero pivot: {error}"
+            ) from error
         lower, d, order = self._solver.factors()
         d = np.asarray(d, dtype=float)
         if not np.all(d > 0):

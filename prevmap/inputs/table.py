@@ -13,7 +13,7 @@ from zipfile import BadZipFile
 
 import geopandas as gpd
 import numpy as np
-import openpyxl  # type: ignore[import-untyped]
+import openpyxl
 import pandas as pd
 import pyogrio
 

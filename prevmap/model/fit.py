@@ -104,7 +104,7 @@ class Fit:
     @property
     def range_km(self) -> float:
         """Posterior median of the range."""
-        return float(self.hyperparameters.loc["range_km", "median"])
+        return float(self.hyperparameters["median"].to_dict()["range_km"])
 
     def predict(
         self, places: Grid | gpd.GeoDataFrame, nugget: Literal["average", "omit", "draw"] = "average"
@@ -155,31 +155,35 @@ class Fit:
         """
         from prevmap.model.units import estimate_units
 
-        return estimate_units(self, grid, seed=self.seed if seed is None else seed, draws=draws, nugget=nugget)
+        return estimate_units(
+            self, grid, seed=self.seed if seed is None else seed, draws=draws, nugget=nugget
+        )
 
     def __repr__(self) -> str:
         d = self.diagnostics
-        where = f"{d['nodes']:,} nodes, edge {d['edge_km']:.3g} km" if self.engine == "mesh" else "exact engine"
-        h = self.hyperparameters
+        where = (
+            f"{d['nodes']:,} nodes, edge {d['edge_km']:.3g} km" if self.engine == "mesh" else "exact engine"
+        )
         lines = [
             f"Fit: {self.n_positive:,} positive of {self.n_examined:,} examined at {self.n_sites:,} sites; {where}",
             f"  log-evidence {self.log_evidence:.3f}, {d['evaluations']} evaluations, {d['components']} components, "
             f"gradient {d['gradient_norm']:.2g}, smallest pivot {d['smallest_pivot']:.2g}",
         ]
         lines += [
-            f"  {name}: {h.loc[name, 'median']:.3g} ({h.loc[name, 'lower95']:.3g} to {h.loc[name, 'upper95']:.3g})"
-            for name in HYPERPARAMETERS
+            f"  {name!s}: {row['median']:.3g} ({row['lower95']:.3g} to {row['upper95']:.3g})"
+            for name, row in self.hyperparameters.iterrows()
         ]
-        lines += [f"  {t}: {r['mean']:.3g} (sd {r['sd']:.2g})" for t, r in self.coefficients.iterrows()]
+        lines += [f"  {t!s}: {r['mean']:.3g} (sd {r['sd']:.2g})" for t, r in self.coefficients.iterrows()]
         lines += [f"  warning: {w}" for w in self.warnings]
         return "\n".join(lines)
 
     def _repr_html_(self) -> str:
+        three = "{:.3g}".format
         warnings = "".join(f"<li>{html.escape(w)}</li>" for w in self.warnings)
         return (
             f"<p>{self.n_positive:,} positive of {self.n_examined:,} examined at {self.n_sites:,} sites; "
             f"log-evidence {self.log_evidence:.3f}</p>"
-            f"{self.coefficients.to_html(float_format='%.3g')}{self.hyperparameters.to_html(float_format='%.3g')}"
+            f"{self.coefficients.to_html(float_format=three)}{self.hyperparameters.to_html(float_format=three)}"
             + (f"<ul>{warnings}</ul>" if warnings else "")
         )
 
@@ -220,7 +224,9 @@ def fit_model(
     if model.nu not in SMOOTHNESS:
         raise InputError(f"nu = {model.nu!r}: expected one of {', '.join(str(v) for v in SMOOTHNESS)}")
     if engine == "mesh" and model.nu != 1.0:
-        raise InputError(f"nu = {model.nu!r}: the mesh engine has nu = 1; use engine='exact' for another smoothness")
+        raise InputError(
+            f"nu = {model.nu!r}: the mesh engine has nu = 1; use engine='exact' for another smoothness"
+        )
     if len(survey.frame) == 0:
         raise InputError("the survey has no row with a position: no model can be fitted")
     if region is None:
@@ -247,7 +253,9 @@ def fit_model(
 
     tick = _Progress(progress)
     try:
-        core, posterior, shape, warnings = _run(model, region, rows, resolved, engine, integrate, margin_km, tick)
+        core, posterior, shape, warnings = _run(
+            model, region, rows, resolved, engine, integrate, margin_km, tick
+        )
     finally:
         tick.close()
     mode = posterior.mode
@@ -318,7 +326,11 @@ def _run(
         peak = find_peak(core, outer, tick=tick)
         lower, middle = _range_limits(infer(core, outer, peak, integrate=False))
         finer = _finer_edge(model, zone, lower, edge)
-        wider = float(f"{1.25 * middle:.3g}") if margin_km < middle and model.mesh.margin_km is None else margin_km
+        wider = (
+            float(f"{1.25 * middle:.3g}")
+            if margin_km < middle and model.mesh.margin_km is None
+            else margin_km
+        )
         if remeshed or (finer == edge and wider == margin_km):
             break
         edge, margin_km, remeshed = finer, wider, True
@@ -346,7 +358,9 @@ def _finer_edge(model: PrevalenceModel, zone: Any, lower: float, edge: float) ->
     if model.mesh.edge_km is not None or edge <= lower / _EDGES_PER_LOWER_RANGE:
         return edge
     most = min(meshing.REFINED_NODES, model.mesh.max_nodes // 2)
-    finer = meshing.default_edge_km(zone, meshing.EDGES_PER_RANGE * lower / _EDGES_PER_LOWER_RANGE, math.inf, most)
+    finer = meshing.default_edge_km(
+        zone, meshing.EDGES_PER_RANGE * lower / _EDGES_PER_LOWER_RANGE, math.inf, most
+    )
     return finer if finer < 0.9 * edge else edge
 
 
@@ -419,7 +433,9 @@ def _gaussian_mixture_quantile(
 def _hyperparameters(posterior: Posterior, resolved: tuple[Resolved, ...]) -> pd.DataFrame:
     theta = posterior.mode.theta
     rows = []
-    for j, (prior, at_mode) in enumerate(zip(resolved, (theta.range_km, theta.sd, theta.nugget_sd), strict=True)):
+    for j, (prior, at_mode) in enumerate(
+        zip(resolved, (theta.range_km, theta.sd, theta.nugget_sd), strict=True)
+    ):
         if prior.free:
             values, weights = posterior.marginals[j]
             limits = [math.exp(weighted_quantile(values, weights, q)) for q in (0.5, 0.025, 0.975)]
@@ -427,7 +443,9 @@ def _hyperparameters(posterior: Posterior, resolved: tuple[Resolved, ...]) -> pd
             limits = [at_mode] * 3
         rows.append([*limits, at_mode])
     return pd.DataFrame(
-        rows, columns=["median", "lower95", "upper95", "at_mode"], index=pd.Index(HYPERPARAMETERS, name="name")
+        rows,
+        columns=["median", "lower95", "upper95", "at_mode"],
+        index=pd.Index(HYPERPARAMETERS, name="name"),
     )
 
 

@@ -53,7 +53,9 @@ def mesh_over(zone: Any, edge_km: float, margin_km: float, max_nodes: int) -> Me
     InputError
         Above ``max_nodes``, before any work, with the edge that would fit.
     """
-    check_node_cap(zone.area, edge_km, margin_km, max_nodes, zone_perimeter_km=shapely.convex_hull(zone).length)
+    check_node_cap(
+        zone.area, edge_km, margin_km, max_nodes, zone_perimeter_km=shapely.convex_hull(zone).length
+    )
     grown = shapely.simplify(zone, edge_km / 50.0).buffer(edge_km)
     lattice = equilateral_lattice(grown.bounds, edge_km)
     inner = lattice[shapely.contains_xy(grown, lattice[:, 0], lattice[:, 1])]

@@ -59,7 +59,11 @@ def resolve_priors(priors: Priors, diagonal_km: float) -> tuple[Resolved, Resolv
         )
     else:
         of_range = Resolved(None, float(given), f"range fixed at {float(given):g} km")
-    return of_range, _deviation(priors.sd, "sd of the field"), _deviation(priors.nugget_sd, "sd of the nugget")
+    return (
+        of_range,
+        _deviation(priors.sd, "sd of the field"),
+        _deviation(priors.nugget_sd, "sd of the nugget"),
+    )
 
 
 def _deviation(given: Above | float | None, name: str) -> Resolved:
@@ -74,7 +78,9 @@ def _deviation(given: Above | float | None, name: str) -> Resolved:
     return Resolved(None, float(given), f"{name} fixed at {float(given):g} on the logit scale")
 
 
-def prior_sentences(priors: Priors, resolved: tuple[Resolved, ...], terms: int) -> tuple[tuple[str, str], ...]:
+def prior_sentences(
+    priors: Priors, resolved: tuple[Resolved, ...], terms: int
+) -> tuple[tuple[str, str], ...]:
     """Name and sentence of every prior, for the report."""
     mean, sd = priors.intercept
     out = [(n, r.sentence) for n, r in zip(("range_km", "sd", "nugget_sd"), resolved, strict=True)]

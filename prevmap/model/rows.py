@@ -78,7 +78,10 @@ def row_accuracy(
 
 
 def pool_rows(
-    frame: pd.DataFrame, xy_km: NDArray[np.float64], design: NDArray[np.float64], accuracy: NDArray[np.float64]
+    frame: pd.DataFrame,
+    xy_km: NDArray[np.float64],
+    design: NDArray[np.float64],
+    accuracy: NDArray[np.float64],
 ) -> Rows:
     """Pool rows of one site with equal position, covariates and test; the site's other rows share its nugget.
 
@@ -103,8 +106,8 @@ def pool_rows(
     whole = np.column_stack([rank[code].astype(float), keys])
     distinct, first, inverse = np.unique(whole, axis=0, return_index=True, return_inverse=True)
     inverse = inverse.ravel()
-    examined = np.bincount(inverse, weights=frame["examined"].to_numpy(dtype=float))
-    positive = np.bincount(inverse, weights=frame["positive"].to_numpy(dtype=float))
+    examined = np.bincount(inverse, weights=frame["examined"].to_numpy(dtype=float)).astype(float)
+    positive = np.bincount(inverse, weights=frame["positive"].to_numpy(dtype=float)).astype(float)
     p = design.shape[1]
     data = observations(
         examined, positive, distinct[:, 0].astype(np.int64), distinct[:, -2].copy(), distinct[:, -1].copy()

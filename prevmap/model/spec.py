@@ -141,7 +141,9 @@ class Priors:
         ):
             other = Above if kind is Below else Below
             if isinstance(value, other):
-                raise InputError(f"{name} = {value!r}: expected {kind.__name__}(value, probability=...) or a number")
+                raise InputError(
+                    f"{name} = {value!r}: expected {kind.__name__}(value, probability=...) or a number"
+                )
             if value is not None and not isinstance(value, kind):
                 _positive(value, name)
         if self.sd is None:
@@ -215,7 +217,9 @@ class PrevalenceModel:
         object.__setattr__(self, "covariates", tuple(self.covariates))
         for name, accuracy in (self.tests or {}).items():
             if not isinstance(accuracy, DiagnosticAccuracy):
-                raise InputError(f"tests[{name!r}] = {accuracy!r}: expected DiagnosticAccuracy(sensitivity, specificity)")
+                raise InputError(
+                    f"tests[{name!r}] = {accuracy!r}: expected DiagnosticAccuracy(sensitivity, specificity)"
+                )
 
     def fit(
         self,

@@ -210,7 +210,9 @@ def check_threshold(threshold: float) -> None:
     InputError
     """
     if not 0.0 < threshold < 1.0:
-        raise InputError(f"threshold = {threshold!r}: expected a prevalence strictly between 0 and 1, such as 0.10")
+        raise InputError(
+            f"threshold = {threshold!r}: expected a prevalence strictly between 0 and 1, such as 0.10"
+        )
 
 
 def check_nugget(nugget: str) -> None:
@@ -237,10 +239,14 @@ def predict_surface(fit: Fit, places: Grid | gpd.GeoDataFrame, *, nugget: str) -
         points, xy = grid.frame_points(), np.round(grid.xy_km, 6)
     elif isinstance(places, gpd.GeoDataFrame):
         if places.crs is None:
-            raise InputError("the points have no coordinate system: set one, for example points.set_crs(4326)")
+            raise InputError(
+                "the points have no coordinate system: set one, for example points.set_crs(4326)"
+            )
         points, xy = places.to_crs(fit.region.crs), np.round(fit.region.project(places.geometry), 6)
     else:
-        raise InputError(f"cannot predict at {type(places).__name__}: expected a grid or a GeoDataFrame of points")
+        raise InputError(
+            f"cannot predict at {type(places).__name__}: expected a grid or a GeoDataFrame of points"
+        )
     if len(points) == 0:
         raise InputError("there is no place to predict at: the grid or the frame of points is empty")
     off = ~fit.core.on_mesh(xy)
@@ -264,7 +270,10 @@ def predict_surface(fit: Fit, places: Grid | gpd.GeoDataFrame, *, nugget: str) -
             summaries[row, at] = link.prevalence_quantile(mixture, q)
     nearest = cKDTree(fit.rows.xy_km).query(xy)[0]
     far = nearest > fit.range_km
-    return Surface(fit, grid, points, nugget, *summaries, missing, nearest, far, outside, xy, matrix)
+    mean, sd, median, lower, upper = summaries
+    return Surface(
+        fit, grid, points, nugget, mean, sd, median, lower, upper, missing, nearest, far, outside, xy, matrix
+    )
 
 
 def _windows(missing: NDArray[np.bool_]) -> Iterator[NDArray[np.int64]]:
@@ -277,7 +286,7 @@ def _windows(missing: NDArray[np.bool_]) -> Iterator[NDArray[np.int64]]:
 def _mixtures(
     fit: Fit, xy_km: NDArray[np.float64], matrix: NDArray[np.float64], missing: NDArray[np.bool_], nugget: str
 ) -> Iterator[tuple[NDArray[np.int64], link.Mixture]]:
-    """The posterior mixture of the linear predictor, window by window."""
+    """Yield the posterior mixture of the linear predictor, window by window."""
     states, weights = fit.posterior.states, fit.posterior.weights
     tables = link.links(np.array([s.theta.nugget_sd for s in states]), nugget)
     for at in _windows(missing):

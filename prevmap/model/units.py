@@ -85,8 +85,10 @@ class UnitEstimates:
         return np.sqrt(p * (1.0 - p) / self.draws).rename(f"exceedance_{threshold:g}_error")
 
     def with_draws(self, draws: int) -> UnitEstimates:
-        """The same estimates from another number of joint draws."""
-        return _summarise(replace(self, draw_matrix=_draw_units(self.surface, draws, self.seed, _weights(self.grid)[0])))
+        """Estimate again from another number of joint draws."""
+        return _summarise(
+            replace(self, draw_matrix=_draw_units(self.surface, draws, self.seed, _weights(self.grid)[0]))
+        )
 
     def __repr__(self) -> str:
         return (
@@ -95,7 +97,7 @@ class UnitEstimates:
         )
 
     def _repr_html_(self) -> str:
-        return self.frame.to_html(index=False, float_format="%.3g")
+        return self.frame.to_html(index=False, float_format="{:.3g}".format)
 
 
 def estimate_units(fit: Fit, grid: Grid, *, seed: int, draws: int, nugget: str) -> UnitEstimates:
