@@ -69,6 +69,9 @@ class UnitDecisions:
         found = self.frame["decision"].value_counts()
         return {outcome: int(found.get(outcome, 0)) for outcome in self.outcomes}
 
+    def _repr_html_(self) -> str:
+        return self.frame.to_html(index=False, float_format=lambda value: f"{value:.3g}")
+
     @property
     def expected_wrong(self) -> float:
         """Expected number of wrong decisions: the sum of p_wrong over the decided units."""

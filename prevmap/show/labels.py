@@ -110,9 +110,17 @@ def _spots(centre: Any, letter: str, km_per_pt: float, words: str) -> list[tuple
     step = NAME_PT * km_per_pt
     x, y = centre.x, centre.y
     if letter:
-        below, line = y - 0.62 * step, y + 0.45 * LETTER_PT * km_per_pt
+        below, line = y - 0.84 * step, y + 0.45 * LETTER_PT * km_per_pt
         aside = (0.5 * LETTER_PT + 0.4 * NAME_PT + 0.31 * NAME_PT * len(words)) * km_per_pt
-        return [(x, below), (x - step, below), (x + step, below), (x + aside, line), (x - aside, line)]
+        above = y + 0.9 * LETTER_PT * km_per_pt + 0.84 * step
+        return [
+            (x, below),
+            (x - step, below),
+            (x + step, below),
+            (x + aside, line),
+            (x - aside, line),
+            (x, above),
+        ]
     return [(x, y), (x, y - step), (x, y + step), (x - step, y), (x + step, y)]
 
 

@@ -103,7 +103,13 @@ def map_surface(
     return sheet.ax
 
 
-def map_sites(survey_or_fit: Survey | Fit, region: Region | None = None, ax: Axes | None = None) -> Axes:
+def map_sites(
+    survey_or_fit: Survey | Fit,
+    region: Region | None = None,
+    ax: Axes | None = None,
+    *,
+    surface: Surface | None = None,
+) -> Axes:
     """Map raw site proportions: what was measured, before any model.
 
     Parameters
@@ -114,14 +120,17 @@ def map_sites(survey_or_fit: Survey | Fit, region: Region | None = None, ax: Axe
         Drawn under the sites; a fit brings its own.
     ax : Axes, optional
         Axes to draw on; a new figure without one.
+    surface : Surface, optional
+        Colours as on the prevalence map of this surface, so that the two can be compared.
 
     Returns
     -------
     Axes
         In km of the working CRS.
     """
+    norm = _shared_norm(surface) if surface is not None else None
     with house_style():
-        sheet = draw_site_map(survey_or_fit, region, ax)
+        sheet = draw_site_map(survey_or_fit, region, ax, norm=norm)
         if sheet.own:
             arrange_sheets(sheet.ax.figure, [sheet], 1)
     return sheet.ax

@@ -42,7 +42,7 @@ class ClassStyle:
 
 
 def nice_ceiling(value: float) -> float:
-    """Smallest of 1, 1.2, 1.5, 2, 2.5, 3, 4, 5, 6, 7, 8, 10 times a power of ten that is not below a value.
+    """Round up to 1, 1.2, 1.5, 2, 2.5, 3, 4, 5, 6, 7, 8, 9 or 10 times a power of ten.
 
     Examples
     --------
@@ -52,7 +52,7 @@ def nice_ceiling(value: float) -> float:
     if not math.isfinite(value) or value <= 0.0:
         return 1.0
     power = 10.0 ** math.floor(math.log10(value))
-    for step in (1.0, 1.2, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 7.0, 8.0, 10.0):
+    for step in (1.0, 1.2, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 7.0, 8.0, 9.0, 10.0):
         # One part in 10^9 absorbs the rounding of the division.
         if step * power >= value * (1.0 - 1e-9):
             return float(f"{step * power:.12g}")

@@ -42,5 +42,5 @@ def draw_scale_bar(ax: Any, left_km: float, bottom_km: float, width_km: float, h
     )
     above = bottom_km + 1.5 * height_km
     for offset, text in ((0.0, "0"), (half, f"{half:g}"), (length, f"{length:g} km")):
-        ax.text(left_km + offset, above, text, ha="center", va="bottom", fontsize=7.5)
+        ax.text(left_km + offset, above, text, ha="center", va="bottom", fontsize=7.8)
     return length

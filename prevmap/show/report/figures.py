@@ -54,7 +54,7 @@ def report_figures(
     proportions = np.asarray(sites["proportion"], dtype=float)
     spread = f"{percent(float(proportions.min()))} to {percent(float(proportions.max()))}"
     drawn["sites"] = _figure(
-        map_sites(fit),
+        map_sites(fit, surface=surface),
         f"Map of {count(fit.n_sites, 'surveyed site')}; raw proportions positive run from {spread}.",
         "Raw proportions, before any model. A small sample can be far from its true prevalence by chance.",
     )

@@ -10,7 +10,9 @@ from typing import Any
 
 import jinja2
 
+from prevmap.plan.classify import UNDECIDED
 from prevmap.show.maps import surface_notes
+from prevmap.show.palette import decision_styles
 from prevmap.show.report.checklist import checklist
 from prevmap.show.report.content import ReportContent, ReportFigure
 from prevmap.show.report.methods import cited_sources, methods_paragraphs
@@ -102,6 +104,7 @@ def _context(content: ReportContent) -> dict[str, Any]:
         "maps": [("By place", of_cells), ("By unit", of_units)],
         "map_notes": surface_notes(content.surface),
         "units": unit_table(content),
+        "class_colours": _class_colours(content),
         "decided": content.decisions is not None,
         "weighted": "weight" in content.survey.frame.columns,
         "methods": paragraphs,
@@ -120,6 +123,17 @@ def _picture(figure: ReportFigure) -> dict[str, Any]:
     width, height = struct.unpack(">II", figure.png[16:24])
     uri = "data:image/png;base64," + base64.b64encode(figure.png).decode("ascii")
     return {"uri": uri, "width": width, "height": height}
+
+
+def _class_colours(content: ReportContent) -> list[tuple[str, str]]:
+    """Colours of the classes between several thresholds, by the mark that rows and boxes carry."""
+    decisions = content.decisions
+    if decisions is None or len(decisions.thresholds) == 1:
+        return []
+    styles = decision_styles(decisions.outcomes)
+    return [
+        (f"class{i}", style.colour) for i, (name, style) in enumerate(styles.items()) if name != UNDECIDED
+    ]
 
 
 def _parameter(name: str) -> str:
