@@ -1,5 +1,7 @@
 """The report: complete, self-contained, escaped, readable without colour, and the same every time."""
 
+import doctest
+import importlib
 import re
 from html.parser import HTMLParser
 from types import SimpleNamespace
@@ -315,6 +317,15 @@ def test_the_report_can_be_made_again_byte_for_byte(results, full):
     assert "ab" * 32 in text
     assert "numpy 2.0, scipy 1.14" in text
     assert "4.2" not in re.findall(r"seconds.{0,20}", text)
+
+
+@pytest.mark.parametrize(
+    "module", ["plan.classify", "show.palette", "show.scale_bar", "show.wording", "show.report.tables"]
+)
+def test_the_examples_in_docstrings_hold(module):
+    outcome = doctest.testmod(importlib.import_module(f"prevmap.{module}"))
+    assert outcome.attempted > 0
+    assert outcome.failed == 0
 
 
 @pytest.fixture(scope="module")

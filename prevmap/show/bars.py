@@ -54,7 +54,7 @@ def prevalence_bar(sheet: MapSheet, mappable: Any, label: str, proportions: Any 
 
 def uncertainty_bar(sheet: MapSheet, mappable: Any) -> Any:
     """Colour bar of the width of the 95 % interval, in percentage points."""
-    label = "upper minus lower 95 % limit, percentage points"
+    label = "width, percentage points"
     return colour_bar(sheet, mappable, label, show_tick=lambda width: f"{100.0 * width:.4g}")
 
 

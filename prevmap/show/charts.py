@@ -21,6 +21,7 @@ if TYPE_CHECKING:
 
 _WIDTH = 4.6
 _NAMED_UNITS = 80
+_TALLEST = 15.0
 _MARKERS = ("^", "v", "s", "D", "P", "X", "<", ">")
 
 
@@ -92,7 +93,7 @@ def chart_units(
     order = np.flatnonzero(predicted)[np.argsort(frame["mean"].to_numpy()[predicted], kind="stable")]
     named = len(order) <= _NAMED_UNITS
     with house_style():
-        ax = _axes(ax, 1.3 + len(order) * (0.17 if named else 0.05))
+        ax = _axes(ax, min(1.3 + len(order) * (0.17 if named else 0.05), _TALLEST))
         y = np.arange(len(order))
         shown = frame.iloc[order]
         direct = shown["direct_estimate"].to_numpy(dtype=float)
