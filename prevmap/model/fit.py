@@ -37,6 +37,7 @@ log = logging.getLogger("prevmap")
 
 HYPERPARAMETERS = ("range_km", "sd", "nugget_sd")
 _EDGES_PER_LOWER_RANGE = 5.0
+_MOST_EDGES_PER_RANGE = 10.0  # where the mesh puts the sd off by 2 %, against a range hardly known
 _MOST_DENSE_ROWS = 3_000
 _SD_BOUNDS = (1e-3, 20.0)
 _NUGGET_BOUNDS = (1e-4, 20.0)
@@ -325,7 +326,7 @@ def _run(
         outer = _outer(rows, resolved, edge / 2.0, diagonal, peak)
         peak = find_peak(core, outer, tick=tick)
         lower, middle = _range_limits(infer(core, outer, peak, integrate=False))
-        finer = _finer_edge(model, zone, lower, edge)
+        finer = _finer_edge(model, zone, lower, middle, edge)
         wider = (
             float(f"{1.25 * middle:.3g}")
             if margin_km < middle and model.mesh.margin_km is None
@@ -353,14 +354,13 @@ def _run(
     return core, posterior, shape, warnings
 
 
-def _finer_edge(model: PrevalenceModel, zone: Any, lower: float, edge: float) -> float:
-    """Edge for a second mesh: a fifth of the range's lower limit, as far as nodes allow."""
-    if model.mesh.edge_km is not None or edge <= lower / _EDGES_PER_LOWER_RANGE:
+def _finer_edge(model: PrevalenceModel, zone: Any, lower: float, middle: float, edge: float) -> float:
+    """Edge for a second mesh: a fifth of the range's lower limit, unless the data say little about the range."""
+    wanted = max(lower / _EDGES_PER_LOWER_RANGE, middle / _MOST_EDGES_PER_RANGE)
+    if model.mesh.edge_km is not None or edge <= wanted:
         return edge
     most = min(meshing.REFINED_NODES, model.mesh.max_nodes // 2)
-    finer = meshing.default_edge_km(
-        zone, meshing.EDGES_PER_RANGE * lower / _EDGES_PER_LOWER_RANGE, math.inf, most
-    )
+    finer = meshing.default_edge_km(zone, meshing.EDGES_PER_RANGE * wanted, math.inf, most)
     return finer if finer < 0.9 * edge else edge
 
 
