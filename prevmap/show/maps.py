@@ -177,8 +177,12 @@ def draw_surface(
     sites: bool = False,
     certainty: float | Mapping[str, float] = 0.90,
     norm: Normalize | None = None,
+    exceedance: NDArray[np.float64] | None = None,
 ) -> MapSheet:
-    """Draw one map of a surface and return its sheet, not yet arranged in the figure."""
+    """Draw one map of a surface and return its sheet, not yet arranged in the figure.
+
+    ``exceedance`` (n,) spares a second computation where the caller already has it for this threshold.
+    """
     if show not in _SHOWS:
         raise InputError(f"show: found {show!r}; a surface can show {', '.join(_SHOWS)}.")
     edge = needed_threshold(show, threshold)
@@ -202,7 +206,7 @@ def draw_surface(
         uncertainty_bar(sheet, mappable)
         title = "Uncertainty: width of the 95 % interval"
     else:
-        values = np.asarray(surface.exceedance(edge), dtype=float)
+        values = np.asarray(surface.exceedance(edge) if exceedance is None else exceedance, dtype=float)
         mappable = ScalarMappable(Normalize(0.0, 1.0), EXCEEDANCE)
         exceedance_bar(sheet, mappable, edge, levels)
         title = f"Probability that prevalence is above {threshold_text(edge)}"

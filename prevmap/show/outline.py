@@ -48,7 +48,8 @@ def fill(ax: Any, geometry: Any, **style: Any) -> PathPatch | None:
     if path is None:
         return None
     patch = PathPatch(path, **style)
-    ax.add_patch(patch)
+    # Limits are set beforehand; add_patch would walk every vertex to update them.
+    ax.add_artist(patch)
     return patch
 
 

@@ -30,11 +30,14 @@ class ReportFigure:
         What the figure shows, in words, for screen readers.
     caption : str
         Printed under the figure.
+    figure : Figure, optional
+        The drawing itself, for those who want it in another format.
     """
 
     png: bytes
     alt: str
     caption: str
+    figure: Any = field(default=None, compare=False, repr=False)
 
 
 @dataclass(frozen=True, slots=True)

@@ -6,11 +6,13 @@ from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+from numpy.typing import NDArray
 
-from prevmap.show.canvas import figure_bytes
+from prevmap.show.canvas import figure_bytes, house_style
 from prevmap.show.charts import chart_odds_ratios, chart_sites, chart_units
-from prevmap.show.maps import map_sites, map_surface, surface_notes
+from prevmap.show.maps import draw_surface, map_sites, map_surface, surface_notes
 from prevmap.show.report.content import ReportFigure
+from prevmap.show.sheet import arrange_sheets
 from prevmap.show.unit_maps import map_units
 from prevmap.show.wording import count, inequality, listed, percent, probability, threshold_text
 
@@ -98,10 +100,11 @@ def _surface_figures(
     }
     for i, threshold in enumerate(thresholds):
         name = "exceedance" if len(thresholds) == 1 else f"exceedance_{i + 1}"
-        p = np.asarray(surface.exceedance(threshold), dtype=float)[~hidden]
+        everywhere = np.asarray(surface.exceedance(threshold), dtype=float)
+        p = everywhere[~hidden]
         low, high = (probability(float(v)) for v in (p.min(initial=1.0), p.max(initial=0.0)))
         drawn[name] = _figure(
-            map_surface(surface, "exceedance", threshold, certainty=certainty),
+            _exceedance_map(surface, threshold, certainty, everywhere),
             f"Map of the probability that prevalence is above {threshold_text(threshold)}, from "
             f"{low} to {high}. "
             f"{hatched}",
@@ -163,6 +166,15 @@ def _unit_figures(
     return drawn
 
 
+def _exceedance_map(
+    surface: Any, threshold: float, certainty: float | Mapping[str, float], values: NDArray[np.float64]
+) -> Any:
+    with house_style():
+        sheet = draw_surface(surface, "exceedance", threshold, certainty=certainty, exceedance=values)
+        arrange_sheets(sheet.ax.figure, [sheet], 1)
+    return sheet.ax
+
+
 def _span(values: Any) -> str:
     seen = values[np.isfinite(values)]
     if not len(seen):
@@ -171,4 +183,4 @@ def _span(values: Any) -> str:
 
 
 def _figure(ax: Any, alt: str, caption: str) -> ReportFigure:
-    return ReportFigure(figure_bytes(ax.figure), alt.replace("\u00a0", " "), caption)
+    return ReportFigure(figure_bytes(ax.figure), alt.replace("\u00a0", " "), caption, ax.figure)
