@@ -73,6 +73,21 @@ def test_readme_has_two_shell_blocks_that_make_their_own_environment():
     assert "-m pytest" in test.splitlines()[-1]
 
 
+def test_readme_and_first_notebook_hold_the_same_lines():
+    (lines,) = re.findall(
+        r"^```python\n(.*?)^```$", (ROOT / "README.md").read_text(), re.MULTILINE | re.DOTALL
+    )
+    cells = json.loads((ROOT / "notebooks" / "first_map.ipynb").read_text())["cells"]
+    first = next("".join(cell["source"]) for cell in cells if cell["cell_type"] == "code")
+    assert lines.strip() == first.replace("../demo_data/", "demo_data/").strip()
+
+
+def test_links_of_the_guides_lead_somewhere():
+    for name in ("README.md", "DEVELOPERS.md"):
+        for target in re.findall(r"\]\(([^)]+)\)", (ROOT / name).read_text()):
+            assert (ROOT / target).exists(), f"{name}: {target}"
+
+
 def test_what_developers_are_told_to_run_is_run_before_a_change_lands():
     run = (ROOT / ".ci" / "run").read_text()
     checks = [line.removeprefix(".venv/bin/") for line in shell_blocks("DEVELOPERS.md")[0].splitlines()[4:]]
