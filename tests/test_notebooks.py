@@ -36,3 +36,10 @@ def test_first_map_reaches_the_true_prevalence(monkeypatch):
     expected = np.average(truth["prevalence"], weights=truth["children"])
     # About 7,000 children in 170 schools: two points are some three standard errors of the survey's mean.
     assert estimate == pytest.approx(expected, abs=0.02)
+
+
+def test_the_readme_shows_the_lines_of_the_first_map():
+    cells = nbformat.read(ROOT / "notebooks" / "first_map.ipynb", as_version=4).cells
+    lines = next(cell.source for cell in cells if cell.cell_type == "code")
+    readme = (ROOT / "README.md").read_text(encoding="utf-8")
+    assert "```python\n" + lines.replace("../demo_data/", "demo_data/") + "\n```" in readme
