@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 _WIDTH = 4.6
 _NAMED_UNITS = 80
 _TALLEST = 15.0
+_BIN_WIDTHS = (0.0005, 0.001, 0.002, 0.0025, 0.005, 0.01, 0.02, 0.025, 0.05)
 _MARKERS = ("^", "v", "s", "D", "P", "X", "<", ">")
 
 
@@ -46,8 +47,8 @@ def chart_sites(fit: Fit, threshold: float | None = None, ax: Axes | None = None
         ax = _axes(ax, 2.6)
         proportion = np.asarray(fit.sites["proportion"], dtype=float)
         positive = np.asarray(fit.sites["positive"], dtype=float)
-        top = max(0.05, float(proportion.max(initial=0.0)))
-        step = next(s for s in (0.0025, 0.005, 0.01, 0.02, 0.025, 0.05) if top / s <= 24 or s == 0.05)
+        top = max(0.002, float(proportion.max(initial=0.0)))
+        step = next(s for s in _BIN_WIDTHS if top / s <= 24 or s == _BIN_WIDTHS[-1])
         bins = np.arange(0.0, top + step, step)
         ax.hist(proportion[positive > 0], bins=bins.tolist(), color=SKY, edgecolor="white", linewidth=0.6)
         none = int(np.count_nonzero(positive == 0))

@@ -27,9 +27,9 @@ class UnitText:
 
 
 def short_signs(frame: Any) -> list[str]:
-    """Give each unit a short sign: its code where all have codes of up to five letters, else its number."""
+    """Give each unit a short sign: its code where all have codes of up to four letters, else its number."""
     codes = list(frame["code"]) if "code" in frame else []
-    short = [code for code in codes if isinstance(code, str) and 0 < len(code) <= 5]
+    short = [code for code in codes if isinstance(code, str) and 0 < len(code) <= 4]
     return short if codes and len(short) == len(codes) else [str(i + 1) for i in range(len(frame))]
 
 

@@ -247,9 +247,9 @@ def _decision_words(decisions: UnitDecisions) -> tuple[str, list[str]]:
     else:
         title = f"Units by class, thresholds {edges}"
     sure = (
-        f"at least {100 * above:.4g} %"
+        f"at least {threshold_text(above)}"
         if above == below
-        else f"at least {100 * above:.4g} % for above, {100 * below:.4g} % for below"
+        else f"at least {threshold_text(above)} for above, {threshold_text(below)} for below"
     )
     wrong = f"{decisions.expected_wrong:.1f}"
     return title, [

@@ -37,7 +37,7 @@ def percent(share: float, decimals: int | None = None) -> str:
     elif abs(value) < 0.001:
         return f"< 0.001{NARROW_SPACE}%" if value > 0 else f"> -0.001{NARROW_SPACE}%"
     else:
-        number = f"{float(f'{value:.2g}'):.10g}"
+        number = significant(value, 2)
     return f"{number}{NARROW_SPACE}%"
 
 

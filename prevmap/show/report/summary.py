@@ -99,9 +99,9 @@ def _decided(content: ReportContent) -> list[str]:
     total = sum(counts.values())
     above, below = decisions.certainty["above"], decisions.certainty["below"]
     sure = (
-        f"{100 * above:.4g} %"
+        threshold_text(above)
         if above == below
-        else f"{100 * above:.4g} % (above) or {100 * below:.4g} % (below)"
+        else f"{threshold_text(above)} (above) or {threshold_text(below)} (below)"
     )
     if len(decisions.thresholds) == 1:
         edge = threshold_text(decisions.thresholds[0])
@@ -137,9 +137,9 @@ def _cells(content: ReportContent) -> list[str]:
     for threshold in content.thresholds:
         p = np.asarray(surface.exceedance(threshold), dtype=float)[shown]
         high, low = int((p >= levels["above"]).sum()), int((p <= 1.0 - levels["below"]).sum())
-        sure = f"{100 * levels['above']:.4g} %"
+        sure = threshold_text(levels["above"])
         if levels["above"] != levels["below"]:
-            sure += f" (above) or {100 * levels['below']:.4g} % (below)"
+            sure += f" (above) or {threshold_text(levels['below'])} (below)"
         sentences.append(
             f"Of {count(len(p), 'mapped cell')}, {high:,} {_are(high)} above {threshold_text(threshold)} and "
             f"{low:,} {_are(low)} below with a probability of at least {sure}; "
