@@ -159,8 +159,8 @@ def grade_mesh(
     At distance d from the zone the edge may be edge_km (1 + (growth - 1) d / edge_km), which grows by
     the factor `growth` per ring of its own width. The largest edge_km 2^k within that is used: the
     points with every 2^k-th row and column are again an equilateral lattice, so that rings need no
-    new directions, and where they meet the triangles have angles of 30 degrees or more. Only with a margin
-    under two edges may single triangles at the outer edge be narrower.
+    new directions, and where they meet the triangles have angles of 30 degrees or more. Only
+    single triangles at the outer edge, beside a bay of the zone, may be narrower (about 10 degrees).
     """
     given = np.asarray(inner, dtype=np.float64)
     if given.ndim != 2 or given.shape[1] != 2 or len(given) == 0 or not np.isfinite(given).all():
