@@ -83,7 +83,7 @@ def test_county_births_reproduce_the_reference_fits(row, nu):
         wanted = {
             r["parameter"]: float(r["value"])
             for r in csv.DictReader(file)
-            if r["model_id"] == row and "exact" not in r["model"]
+            if r["model_id"] == row and "exact" not in r["method"]
         }
     counties = pd.read_csv(DATA / "nc" / "nc_sids.csv")
     survey = survey_of(counties[["x_km", "y_km"]], counties["births_74"], counties["sids_74"], KILOMETRES)

@@ -37,8 +37,8 @@ def one_site(y, n, sd, intercept, se=1.0, sp=1.0):
 def test_one_site_worked_values(y, n, sd, intercept, log_z, mode, latent_sd):
     model, state = one_site(y, n, sd, intercept)
     assert state.log_evidence == pytest.approx(log_z, abs=1e-8)  # the intercept's sd of 1e-5
-    prior_variance = sd**2 + TIGHT**2
-    assert intercept + prior_variance * state.mode[0] == pytest.approx(mode, abs=1e-8)
+    weight, coefficient = state.mode
+    assert coefficient + sd**2 * weight == pytest.approx(mode, abs=1e-8)
     _, variance = model.moments(state, model.locate(np.zeros((1, 2)), np.ones((1, 1))))
     assert np.sqrt(variance[0]) == pytest.approx(latent_sd, abs=1e-8)
 
@@ -52,7 +52,7 @@ def test_one_site_with_an_imperfect_test():
     # 3/10 and 1/20 with Se 0.8, Sp 0.95; computed independently with 30-digit arithmetic.
     _, state = one_site(3, 10, 1.0, 0.0, 0.8, 0.95)
     assert state.log_evidence == pytest.approx(-1.899410554312, abs=1e-8)
-    assert (1.0 + TIGHT**2) * state.mode[0] == pytest.approx(-0.401372857723, abs=1e-8)
+    assert state.mode.sum() == pytest.approx(-0.401372857723, abs=1e-8)  # sd 1: weight plus intercept
     assert state.curvature[0] == pytest.approx(1.409813651976, abs=1e-8)
     assert one_site(1, 20, 1.0, -2.0, 0.8, 0.95)[1].log_evidence == pytest.approx(-1.796118675758, abs=1e-8)
 
@@ -69,7 +69,7 @@ def test_two_correlated_sites():
     state = model.laplace(Theta(0.0, np.log(1.2), NO_NUGGET))
     assert state.log_evidence == pytest.approx(-4.628222678439, abs=1e-8)
     covariance = 1.44 * np.array([[1.0, 0.6], [0.6, 1.0]])
-    np.testing.assert_allclose(covariance @ state.mode, [-0.255752274850, -0.125670834822], atol=1e-8)
+    np.testing.assert_allclose(covariance @ state.mode[:2], [-0.255752274850, -0.125670834822], atol=1e-8)
     np.testing.assert_allclose(state.curvature, [2.174447274591, 4.540911426248], atol=1e-8)
     _, variance = model.moments(state, model.locate(xy, np.ones((2, 1))))
     np.testing.assert_allclose(variance, [0.314052813364, 0.181952342062], atol=1e-8)
@@ -85,17 +85,17 @@ def test_three_sites_with_a_free_intercept():
     model = DenseModel(data, xy, np.ones((3, 1)), np.zeros(1), np.array([5.0]))
     state = model.laplace(Theta(np.log(2.0), 0.0, NO_NUGGET))
     assert state.log_evidence == pytest.approx(-8.176709750855, abs=1e-9)
-    S = correlation(np.linalg.norm(xy[:, None] - xy[None], axis=2), 2.0, 1.0) + 25.0
-    np.testing.assert_allclose(S @ state.mode, [-2.176903249616, -1.592049073237, -2.739496296916], atol=1e-9)
+    K = correlation(np.linalg.norm(xy[:, None] - xy[None], axis=2), 2.0, 1.0)
+    eta = K @ state.mode[:3] + state.mode[3]
+    np.testing.assert_allclose(eta, [-2.176903249616, -1.592049073237, -2.739496296916], atol=1e-9)
     rows = model.locate(xy, np.ones((3, 1)))
     mean, variance = model.moments(state, rows)
     np.testing.assert_allclose(variance, [0.347308699477, 0.231883637855, 0.392407349118], atol=1e-9)
     # The mode is off by up to 0.15; the first-order shift removes most of it (exact means by quadrature).
     exact = np.array([-2.307730693776, -1.684249308339, -2.889852013301])
-    assert np.max(np.abs(mean - exact)) < 0.2 * np.max(np.abs(S @ state.mode - exact))
-    coefficient, covariance = model.coefficients(state)
-    shift = 25.0 * float(np.sum(state.mean_shift))
-    assert coefficient[0] - shift == pytest.approx(-2.118754233805, abs=1e-9)
+    assert np.max(np.abs(mean - exact)) < 0.2 * np.max(np.abs(eta - exact))
+    assert state.mode[3] == pytest.approx(-2.118754233805, abs=1e-9)
+    _, covariance = model.coefficients(state)
     assert np.sqrt(covariance[0, 0]) == pytest.approx(0.847514648927, abs=1e-9)
 
 

@@ -2,8 +2,8 @@
 
 The linear predictor at the rows is ``eta ~ N(X mu, S)``, ``S = K + X V X'`` with the Matern covariance ``K``
 and the coefficient prior ``N(mu, V)``. Laplace approximation and gradient follow Rasmussen & Williams (2006),
-algorithms 3.1 and 5.1, written with ``I + S W`` so that a curvature ``W`` with blocks and without a square
-root (imperfect tests) is allowed.
+algorithms 3.1 and 5.1, written with ``I + K W`` so that a curvature ``W`` with blocks and without a square
+root (imperfect tests) is allowed, and with the coefficients apart so that flat priors lose no digits.
 """
 
 from __future__ import annotations
@@ -46,11 +46,11 @@ class DenseState:
     Attributes
     ----------
     theta : Theta
-    mode : (n_rows,) float
-        Weights ``a`` with ``eta* = X mu + S a``.
+    mode : (n_rows + p,) float
+        Weights ``a`` and coefficients ``beta`` with ``eta* = X beta + K a``.
     log_evidence : float
     gradient : (3,) float
-    mean_shift : (n_rows,) float
+    mean_shift : (n_rows + p,) float
         What to add to ``mode`` for the first-order corrected posterior mean.
     curvature : (sum of squared block sizes,) float
     iterations : int
@@ -77,12 +77,25 @@ class _Reduction:
     ``log_determinant`` is log|I + S W|.
     """
 
+    lu: tuple[NDArray[np.float64], NDArray[np.int32]]
+    design: NDArray[np.float64]
     field: NDArray[np.float64]
     whole: NDArray[np.float64]
     coefficients: NDArray[np.float64]
     covariance: NDArray[np.float64]
     log_determinant: float
     smallest_pivot: float
+
+    def solve(
+        self, right: NDArray[np.float64], prior: NDArray[np.float64], weighted_design: NDArray[np.float64]
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Weights and coefficients of the linear system of a Newton step.
+
+        (I + W K) a + W X beta = right;  V^-1 beta = prior + X' a.
+        """
+        alone = lu_solve(self.lu, right, trans=1)
+        beta = self.coefficients @ (prior + self.design.T @ alone)
+        return alone - lu_solve(self.lu, weighted_design @ beta, trans=1), beta
 
 
 class DenseModel:
@@ -113,8 +126,6 @@ class DenseModel:
         self.coefficient_mean = np.asarray(coefficient_mean, dtype=float)
         self.coefficient_variance = np.asarray(coefficient_sd, dtype=float) ** 2
         self._distance = cdist(xy_km, xy_km)
-        self._linear = (design * self.coefficient_variance) @ design.T
-        self._offset = design @ self.coefficient_mean
 
     def _blocks(self, curvature: NDArray[np.float64]) -> NDArray[np.float64]:
         """Dense block-diagonal matrix of the curvature blocks."""
@@ -133,37 +144,42 @@ class DenseModel:
         return theta.sd**2 * correlation(self._distance, theta.range_km, self.nu)
 
     def _mode(
-        self, theta: Theta, S: NDArray[np.float64], start: NDArray[np.float64] | None
-    ) -> tuple[NDArray[np.float64], int]:
-        a = np.zeros(self._offset.size) if start is None else start.copy()
-        identity = np.eye(a.size)
+        self, theta: Theta, K: NDArray[np.float64], start: NDArray[np.float64] | None
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64], int]:
+        """Field weights a and coefficients beta at the mode, by Newton's method with step halving."""
+        X, n = self.design, len(self.xy_km)
+        a = np.zeros(n) if start is None else start[:n].copy()
+        beta = self.coefficient_mean.copy() if start is None else start[n:].copy()
+        prior = 1.0 / self.coefficient_variance
 
-        def objective(v: NDArray[np.float64]) -> float:
-            Sv = S @ v
-            return evaluate(self.data, self._offset + Sv, theta.nugget_sd).value - 0.5 * float(v @ Sv)
+        def objective(weights: NDArray[np.float64], coefficients: NDArray[np.float64]) -> float:
+            f, d = K @ weights, coefficients - self.coefficient_mean
+            value = evaluate(self.data, X @ coefficients + f, theta.nugget_sd).value
+            return value - 0.5 * float(weights @ f) - 0.5 * float(d @ (prior * d))
 
-        value = objective(a)
+        value = objective(a, beta)
         trace: list[float] = []
         for step_number in range(1, _MAX_STEPS + 1):
-            f = S @ a
-            terms = evaluate(self.data, self._offset + f, theta.nugget_sd)
+            eta = X @ beta + K @ a
+            terms = evaluate(self.data, eta, theta.nugget_sd)
             W = self._blocks(clamp_blocks(terms.curvature, self.data))
-            b = W @ f + terms.gradient
-            target = b - W @ lu_solve(lu_factor(identity + S @ W), S @ b)
-            step = target - a
-            decrement = float((terms.gradient - a) @ (S @ step))
+            reduction = self._reduction(K, W)
+            da, dbeta = reduction.solve(W @ eta + terms.gradient, prior * self.coefficient_mean, W @ X)
+            da, dbeta = da - a, dbeta - beta
+            decrement = float(da @ (K @ (terms.gradient - a)))
+            decrement += float(dbeta @ (X.T @ terms.gradient - prior * (beta - self.coefficient_mean)))
             trace.append(decrement)
             if not np.isfinite(decrement):
                 break
             if decrement < _DECREMENT:
-                return target, step_number
+                return a + da, beta + dbeta, step_number
             length = 1.0
             for _ in range(30):
-                trial = objective(a + length * step)
+                trial = objective(a + length * da, beta + length * dbeta)
                 if trial >= value + 1e-4 * length * decrement - 1e-11 * abs(value):
                     break
                 length *= 0.5
-            a = a + length * step
+            a, beta = a + length * da, beta + length * dbeta
             value = trial
         shown = ", ".join(f"{d:.3g}" for d in trace[-6:])
         raise FitError(
@@ -179,31 +195,37 @@ class DenseModel:
         FitError
             Where Newton's method fails or the posterior is not peaked at the point it found.
         """
-        K = self._field(theta)
-        S = K + self._linear
-        a, steps = self._mode(theta, S, start)
-        f = S @ a
-        eta = self._offset + f
+        K, X = self._field(theta), self.design
+        a, beta, steps = self._mode(theta, K, start)
+        eta = X @ beta + K @ a
         terms = evaluate(self.data, eta, theta.nugget_sd)
         W = self._blocks(terms.curvature)
         reduction = self._reduction(K, W)
-        R = reduction.whole
-        log_evidence = terms.value - 0.5 * float(a @ f) - 0.5 * reduction.log_determinant
+        d = beta - self.coefficient_mean
+        log_evidence = (
+            terms.value - 0.5 * float(a @ (K @ a)) - 0.5 * float(d @ (d / self.coefficient_variance))
+        )
+        log_evidence -= 0.5 * reduction.log_determinant
 
         higher = higher_terms(self.data, eta, theta.nugget_sd, self._gather(reduction.covariance))
-        shift = 0.5 * (higher.third - R @ (S @ higher.third))  # (I + W S)^-1 = I - R S
+        shift, shift_beta = reduction.solve(0.5 * higher.third, np.zeros(beta.size), W @ X)
         d_range = theta.sd**2 * correlation_range_derivative(self._distance, theta.range_km, self.nu)
         gradient = np.zeros(3)
-        for at, dS in ((0, d_range), (1, 2.0 * K)):
-            gradient[at] = 0.5 * float(a @ dS @ a) - 0.5 * float(np.sum(R * dS.T)) + float(shift @ (dS @ a))
+        for at, dK in ((0, d_range), (1, 2.0 * K)):
+            trace = float(np.sum(reduction.whole * dK))
+            gradient[at] = 0.5 * float(a @ dK @ a) - 0.5 * trace + float(shift @ (dK @ a))
         if np.isfinite(theta.log_nugget):
-            gradient[2] = (
-                higher.nugget_value
-                + 0.5 * higher.nugget_hessian
-                + float(shift @ (S @ higher.nugget_gradient))
-            )
+            implicit = float((K @ shift + X @ shift_beta) @ higher.nugget_gradient)
+            gradient[2] = higher.nugget_value + 0.5 * higher.nugget_hessian + implicit
         return DenseState(
-            theta, a, log_evidence, gradient, shift, terms.curvature, steps, reduction.smallest_pivot
+            theta,
+            np.concatenate([a, beta]),
+            log_evidence,
+            gradient,
+            np.concatenate([shift, shift_beta]),
+            terms.curvature,
+            steps,
+            reduction.smallest_pivot,
         )
 
     def locate(self, xy_km: NDArray[np.float64], design: NDArray[np.float64]) -> DenseRows:
@@ -242,7 +264,7 @@ class DenseModel:
         covariance = lu_solve(lu, K) + reach @ coefficients @ reach.T
         whole = field - field @ X @ coefficients @ X.T @ field
         return _Reduction(
-            field, whole, coefficients, covariance, log_determinant, float(np.min(np.abs(pivots)))
+            lu, X, field, whole, coefficients, covariance, log_determinant, float(np.min(np.abs(pivots)))
         )
 
     def _conditioned(self, state: DenseState) -> _Reduction:
@@ -261,10 +283,10 @@ class DenseModel:
         """Mean, field covariance with the data, and what of each row's covariates the field does not explain."""
         reduction = self._conditioned(state)
         near = state.theta.sd**2 * correlation(cdist(rows.xy_km, self.xy_km), state.theta.range_km, self.nu)
-        weights = state.mode + state.mean_shift
-        coefficients = self.coefficient_mean + self.coefficient_variance * (self.design.T @ weights)
+        n = len(self.xy_km)
+        latent = state.mode + state.mean_shift
         return (
-            rows.design @ coefficients + near @ weights,
+            rows.design @ latent[n:] + near @ latent[:n],
             near,
             rows.design - near @ reduction.field @ self.design,
             reduction,
@@ -272,10 +294,8 @@ class DenseModel:
 
     def coefficients(self, state: DenseState) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Mean (p,) and covariance (p, p) of the coefficients."""
-        mean = self.coefficient_mean + self.coefficient_variance * (
-            self.design.T @ (state.mode + state.mean_shift)
-        )
-        return mean, self._conditioned(state).coefficients
+        latent = state.mode + state.mean_shift
+        return latent[len(self.xy_km) :], self._conditioned(state).coefficients
 
     def draws(
         self, state: DenseState, windows: Iterable[DenseRows], rng: np.random.Generator, count: int
