@@ -2,12 +2,13 @@
 
 import geopandas as gpd
 import numpy as np
-import prevmap
 import pytest
 import rasterio
 from scipy.special import expit
 from shapely.geometry import box
 from tolerances import MONTE_CARLO_ERRORS
+
+import prevmap
 
 CRS = "+proj=laea +lat_0=0 +lon_0=0 +datum=WGS84 +units=m"
 

@@ -5,7 +5,6 @@ from pathlib import Path
 import geopandas as gpd
 import numpy as np
 import pandas as pd
-import prevmap
 import pytest
 import rasterio
 from scipy.stats import binom
@@ -13,6 +12,7 @@ from shapely.geometry import box
 from test_surface import CRS, square_region, survey
 from tolerances import MONTE_CARLO_ERRORS
 
+import prevmap
 from prevmap.model.direct import weighted_proportion, wilson_interval
 from prevmap.model.surface import draws_per_component
 
