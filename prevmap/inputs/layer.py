@@ -22,7 +22,7 @@ from prevmap.inputs.coverage import areal
 from prevmap.inputs.findings import Finding
 from prevmap.inputs.working_crs import check_degrees
 
-LONG_EDGE_DEG = 0.1  # longer edges in degrees get extra corners, so that they stay straight in degrees
+LONG_EDGE_DEG = 0.02  # longer edges in degrees get extra corners, so that they stay straight in degrees
 
 
 def read_layer(
