@@ -70,6 +70,7 @@ def _parser() -> argparse.ArgumentParser:
 
     inspect = commands.add_parser("inspect", help="check every input of a study file; fit nothing")
     inspect.add_argument("study", type=Path, metavar="STUDY", help="the study file (TOML)")
+    inspect.add_argument("--quiet", action="store_true", help="print no progress")
     inspect.set_defaults(command=_inspect)
 
     demo = commands.add_parser("demo", help="copy the demo study into a folder and run it")
@@ -109,7 +110,7 @@ def _print_results(folder: Path) -> None:
 def _inspect(options: argparse.Namespace) -> int:
     from prevmap.study import read_study
 
-    print(read_study(options.study).inspect())
+    print(read_study(options.study).inspect(progress=not options.quiet))
     return DONE
 
 

@@ -121,6 +121,25 @@ def test_demo_refuses_a_folder_of_other_things(tmp_path, capsys):
     assert [path.name for path in tmp_path.iterdir()] == ["mine.txt"]
 
 
+def test_demo_copies_what_a_study_needs_and_no_truth(tmp_path, monkeypatch, capsys):
+    class Done:
+        folder = tmp_path / "demo" / "results"
+
+    monkeypatch.setattr(Study, "run", lambda *_a, **_s: Done)
+    assert main(["demo", str(tmp_path / "demo")]) == 0
+    assert f"Report:  {Done.folder / 'share' / 'report.html'}" in capsys.readouterr().out
+    copied = {path.relative_to(tmp_path / "demo").as_posix() for path in (tmp_path / "demo").rglob("*")}
+    assert {"study.toml", "sites.csv", "districts.geojson", "README.md"} <= copied
+    assert not [name for name in copied if "truth" in name or name.endswith(".py")]
+    # Once more into the same folder: allowed while its files are the demo's.
+    (tmp_path / "demo" / "notes.txt").write_text("mine")
+    assert main(["demo", str(tmp_path / "demo")]) == 0
+    (tmp_path / "demo" / "study.toml").write_text("schema = 1 # mine")
+    assert main(["demo", str(tmp_path / "demo")]) == 2
+    assert "its study.toml is not the demo's" in capsys.readouterr().err
+    assert (tmp_path / "demo" / "study.toml").read_text() == "schema = 1 # mine"
+
+
 def test_demo_refuses_a_file(tmp_path, capsys):
     (tmp_path / "mine.txt").write_text("mine")
     assert main(["demo", str(tmp_path / "mine.txt")]) == 2

@@ -248,7 +248,7 @@ def run_study(study: Study, *, progress: bool, output: Path | None) -> StudyResu
                 region=inputs.region,
                 engine=study.model.engine,
                 integrate=study.model.integrate,
-                progress=progress,
+                progress=stages.bars,
                 seed=study.model.seed,
             )
             fit = replace(fit, findings=joined_findings([fit.findings, *inputs.grid_findings]))

@@ -19,7 +19,7 @@ from prevmap.model.prior import resolve_priors
 from prevmap.model.rows import row_accuracy
 from prevmap.model.spec import PrevalenceModel
 from prevmap.study.chain import StudyInputs, build_model, joined_findings, naming, read_inputs
-from prevmap.study.progress import Stages, kept_warnings
+from prevmap.study.progress import Stages
 from prevmap.study.schema import Study
 
 _WIDTHS = {"severity": 8, "row": 6, "site": 16, "field": 14, "what": 52, "action": 34}
@@ -66,10 +66,15 @@ def findings_lines(findings: pd.DataFrame) -> list[str]:
     return lines
 
 
-def inspect_study(study: Study) -> Inspection:
+def inspect_study(study: Study, *, progress: bool) -> Inspection:
     """Read and check everything, at the sites and on the grid; see :meth:`Study.inspect`."""
-    with kept_warnings():
-        inputs = read_inputs(study, Stages(3, shown=False))
+    stages = Stages(4, progress)
+    inputs = read_inputs(study, stages)
+    with stages.stage("checks", "Checking sites and covariates"):
+        return _inspected(study, inputs)
+
+
+def _inspected(study: Study, inputs: StudyInputs) -> Inspection:
     model = build_model(study, inputs.covariates)
     survey, region, grid = inputs.survey, inputs.region, inputs.grid
     if not len(survey.frame):

@@ -30,6 +30,11 @@ class Stages:
         self.shown = shown
         self.seconds: dict[str, float] = {}
 
+    @property
+    def bars(self) -> bool:
+        """Whether a bar that redraws itself can be shown: on a terminal or in a notebook, not in a log file."""
+        return self.shown and (sys.stderr.isatty() or "ipykernel" in sys.modules)
+
     @contextlib.contextmanager
     def stage(self, name: str, doing: str) -> Iterator[None]:
         """Run one stage between its two lines."""

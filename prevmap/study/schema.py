@@ -89,8 +89,13 @@ class Study:
 
         return run_study(self, progress=progress, output=None if output is None else Path(output))
 
-    def inspect(self) -> Inspection:
+    def inspect(self, progress: bool = False) -> Inspection:
         """Check every input and say what a fit would do, without fitting or writing anything.
+
+        Parameters
+        ----------
+        progress : bool
+            Show the stages and their times on standard error.
 
         Raises
         ------
@@ -99,7 +104,7 @@ class Study:
         """
         from prevmap.study.inspection import inspect_study  # as in run
 
-        return inspect_study(self)
+        return inspect_study(self, progress=progress)
 
     def input_files(self) -> dict[str, Path]:
         """Return every input file by the key that names it, the study file itself first."""
