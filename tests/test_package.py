@@ -12,6 +12,7 @@ from pathlib import Path
 import pytest
 
 import prevmap
+from prevmap.study.settings import SECTIONS, names
 
 ROOT = Path(__file__).parents[1]
 HEAVY = {"pandas", "geopandas", "numba", "matplotlib", "rasterio", "scipy", "statsmodels", "numpy"}
@@ -71,6 +72,31 @@ def test_readme_has_two_shell_blocks_that_make_their_own_environment():
     assert demo.splitlines()[-1].endswith("/prevmap demo prevmap_demo")
     assert '".[test]"' in test
     assert "-m pytest" in test.splitlines()[-1]
+
+
+def test_readme_lists_every_key_of_a_study_file():
+    (text,) = re.findall(r"^```toml\n(.*?)^```$", (ROOT / "README.md").read_text(), re.MULTILINE | re.DOTALL)
+    tables = tomllib.loads(text)
+    assert list(tables) == ["schema", *SECTIONS]
+    for section, kind in SECTIONS.items():
+        shown = tables[section]
+        if section == "covariate":
+            shown = {key: value for table in shown for key, value in table.items()}
+        if section == "tests":
+            (shown,) = shown.values()
+        left_to_a_comment = {"survey": {"x", "y", "crs"}, "grid": {"cells"}}.get(section, set())
+        assert set(shown) == set(names(kind)) - left_to_a_comment
+        assert all(re.search(rf"\b{key}\b", text) for key in left_to_a_comment)
+
+
+def test_readme_shows_a_study_file_that_can_be_read(tmp_path):
+    (text,) = re.findall(r"^```toml\n(.*?)^```$", (ROOT / "README.md").read_text(), re.MULTILINE | re.DOTALL)
+    for name in re.findall(r"\"([\w]+\.(?:csv|tif|geojson))\"", text):
+        (tmp_path / name).touch()
+    (tmp_path / "study.toml").write_text(text)
+    study = prevmap.read_study(tmp_path / "study.toml")
+    assert len(study.covariates) == 4
+    assert study.decision.certainty == 0.90
 
 
 def test_links_of_the_guides_lead_somewhere():
