@@ -137,7 +137,8 @@ class Posterior:
     mode : State
     marginals : {index in theta: (values, weights)}
         Fine discrete marginal of each free entry of theta.
-    evaluations : int
+    evaluations, iterations : int
+        Evaluations of the log-evidence, and Newton steps in all of them.
     gradient_norm : float
         Norm of the gradient of the log posterior at the mode.
     warnings : tuple of str
@@ -149,6 +150,7 @@ class Posterior:
     mode: Any
     marginals: dict[int, tuple[NDArray[np.float64], NDArray[np.float64]]]
     evaluations: int
+    iterations: int
     gradient_norm: float
     warnings: tuple[str, ...]
 
@@ -168,7 +170,7 @@ class Peak:
         Columns are the principal directions of the curvature, one posterior standard deviation long.
     gradient_norm : float
         What is left of the gradient, in posterior standard deviations.
-    evaluations : int
+    evaluations, iterations : int
     warnings : tuple of str
     """
 
@@ -178,6 +180,7 @@ class Peak:
     basis: NDArray[np.float64]
     gradient_norm: float
     evaluations: int
+    iterations: int
     warnings: tuple[str, ...]
 
     @property
@@ -212,7 +215,7 @@ def find_peak(
     search = _Search(engine, outer, start, tick)
     if not np.any(outer.free):
         value, _, state = search.evaluate(np.zeros(0), "mode")
-        return Peak(np.zeros(0), value, state, np.zeros((0, 0)), 0.0, search.count, ())
+        return Peak(np.zeros(0), value, state, np.zeros((0, 0)), 0.0, search.count, search.iterations, ())
     mode = search.find_mode()
     value, gradient, best = search.evaluate(mode, "curvature")
     eigenvalues, vectors = np.linalg.eigh(search.curvature(mode))
@@ -224,7 +227,7 @@ def find_peak(
         eigenvalues = np.maximum(eigenvalues, _FLATTEST)
     basis = vectors / np.sqrt(eigenvalues)
     norm = float(np.sqrt(gradient @ (basis @ basis.T) @ gradient))
-    return Peak(mode, value, best, basis, norm, search.count, tuple(search.warnings))
+    return Peak(mode, value, best, basis, norm, search.count, search.iterations, tuple(search.warnings))
 
 
 def infer(
@@ -250,7 +253,15 @@ def infer(
     index = np.flatnonzero(outer.free)
     if not index.size:
         return Posterior(
-            (peak.state,), np.ones(1), peak.log_posterior, peak.state, {}, peak.evaluations, 0.0, ()
+            (peak.state,),
+            np.ones(1),
+            peak.log_posterior,
+            peak.state,
+            {},
+            peak.evaluations,
+            peak.iterations,
+            0.0,
+            (),
         )
     if not integrate:
         evidence = peak.log_posterior + 0.5 * index.size * np.log(2.0 * np.pi) + peak.log_volume
@@ -260,7 +271,7 @@ def infer(
         marginals = {int(j): (peak.values[at] + sd[at] * z, density) for at, j in enumerate(index)}
         return Posterior(
             (peak.state,), np.ones(1), evidence, peak.state, marginals,
-            peak.evaluations, peak.gradient_norm, peak.warnings,
+            peak.evaluations, peak.iterations, peak.gradient_norm, peak.warnings,
         )  # fmt: skip
     search = _Search(engine, outer, peak.state.mode, tick)
     points, values, states = search.lattice(peak)
@@ -276,7 +287,7 @@ def infer(
     return Posterior(
         tuple(states[k] for k in kept), mass[kept] / np.sum(mass[kept]), evidence, peak.state,
         _marginals(points, values, peak.values, peak.basis, index),
-        peak.evaluations + search.count, peak.gradient_norm, tuple(warnings),
+        peak.evaluations + search.count, peak.iterations + search.iterations, peak.gradient_norm, tuple(warnings),
     )  # fmt: skip
 
 
@@ -300,6 +311,7 @@ class _Search:
         self.engine, self.outer, self.tick = engine, outer, tick
         self.latest = start
         self.count = 0
+        self.iterations = 0
         self.warnings: list[str] = []
 
     def evaluate(
@@ -308,6 +320,7 @@ class _Search:
         """Log posterior, its gradient in the free entries, and the state."""
         state = self.engine.laplace(self.outer.theta(free_values), self.latest if start is None else start)
         self.count += 1
+        self.iterations += int(state.iterations)
         if start is None:
             self.latest = state.mode
         if self.tick is not None:

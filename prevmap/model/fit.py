@@ -8,7 +8,7 @@ import math
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 import geopandas as gpd
 import numpy as np
@@ -32,6 +32,10 @@ from prevmap.model import meshing
 from prevmap.model.prior import Resolved, coefficient_prior, prior_sentences, resolve_priors
 from prevmap.model.rows import Rows, pool_rows, row_accuracy
 from prevmap.model.spec import SMOOTHNESS, PrevalenceModel
+
+if TYPE_CHECKING:
+    from prevmap.model.surface import Surface
+    from prevmap.model.units import UnitEstimates
 
 log = logging.getLogger("prevmap")
 
@@ -109,7 +113,7 @@ class Fit:
 
     def predict(
         self, places: Grid | gpd.GeoDataFrame, nugget: Literal["average", "omit", "draw"] = "average"
-    ) -> Any:
+    ) -> Surface:
         """Predict prevalence on a grid or at points.
 
         Parameters
@@ -134,17 +138,18 @@ class Fit:
 
     def units(
         self,
-        grid: Grid,
+        grid: Grid | Surface,
         seed: int | None = None,
         draws: int = 4_000,
         nugget: Literal["average", "omit", "draw"] = "average",
-    ) -> Any:
+    ) -> UnitEstimates:
         """Estimate every implementation unit from joint draws, beside its raw data.
 
         Parameters
         ----------
-        grid : Grid
-            Over this fit's region.
+        grid : Grid or Surface
+            Over this fit's region; a surface already predicted on the grid saves predicting it again, and its
+            nugget setting is used.
         seed : int, optional
             Seed of the draws; the fit's where left out.
         draws : int
@@ -265,7 +270,7 @@ def fit_model(
         **shape,
         "evaluations": posterior.evaluations,
         "components": len(posterior.states),
-        "iterations": int(mode.iterations),
+        "iterations": posterior.iterations,
         "gradient_norm": float(posterior.gradient_norm),
         "smallest_pivot": float(mode.smallest_pivot),
         "seconds": time.perf_counter() - began,

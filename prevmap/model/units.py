@@ -100,7 +100,7 @@ class UnitEstimates:
         return self.frame.to_html(index=False, float_format="{:.3g}".format)
 
 
-def estimate_units(fit: Fit, grid: Grid, *, seed: int, draws: int, nugget: str) -> UnitEstimates:
+def estimate_units(fit: Fit, places: Grid | Surface, *, seed: int, draws: int, nugget: str) -> UnitEstimates:
     """Estimate units; see `Fit.units`.
 
     Raises
@@ -108,12 +108,14 @@ def estimate_units(fit: Fit, grid: Grid, *, seed: int, draws: int, nugget: str) 
     InputError
         Where the region has no units, or fewer than 100 draws are asked for.
     """
-    region = grid.region
-    if not region.has_units:
+    grid = places.grid if isinstance(places, Surface) else places
+    if grid is None:
+        raise InputError("units need a grid: predict on region.grid(...), not at points")
+    if not grid.region.has_units:
         raise InputError("the study area has no units: read a region with named units to estimate them")
     if draws < 100:
         raise InputError(f"draws = {draws!r}: expected at least 100")
-    surface = predict_surface(fit, grid, nugget=nugget)
+    surface = places if isinstance(places, Surface) else predict_surface(fit, places, nugget=nugget)
     weights, weighting = _weights(grid)
     matrix = _draw_units(surface, draws, seed, weights)
     start = UnitEstimates(_raw_frame(fit, grid, surface, weights), matrix, surface, int(seed), weighting)

@@ -254,7 +254,7 @@ def run_study(study: Study, *, progress: bool, output: Path | None) -> StudyResu
             fit = replace(fit, findings=joined_findings([fit.findings, *inputs.grid_findings]))
         with stages.stage("surface", f"Predicting {len(inputs.grid):,} cells"):
             surface = fit.predict(inputs.grid, nugget=study.model.nugget)
-        units, decisions = _decide(study, inputs, fit, stages)
+        units, decisions = _decide(study, inputs, fit, surface, stages)
         thresholds = () if study.decision is None else study.decision.thresholds
         result = StudyResult(
             survey=inputs.survey,
@@ -277,13 +277,13 @@ def run_study(study: Study, *, progress: bool, output: Path | None) -> StudyResu
 
 
 def _decide(
-    study: Study, inputs: StudyInputs, fit: Fit, stages: Stages
+    study: Study, inputs: StudyInputs, fit: Fit, surface: Surface, stages: Stages
 ) -> tuple[UnitEstimates | None, UnitDecisions | None]:
     if not inputs.region.has_units:
         return None, None
     with stages.stage("units", f"Estimating {len(inputs.region.units):,} units"):
-        seed, draws, nugget = study.model.seed, study.model.draws, study.model.nugget
-        units = fit.units(inputs.grid, seed=seed, draws=draws, nugget=nugget)
+        seed, draws = study.model.seed, study.model.draws
+        units = fit.units(surface, seed=seed, draws=draws)
         if study.decision is None:
             return units, None
         decisions = classify_units(
