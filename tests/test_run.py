@@ -16,7 +16,7 @@ import numpy as np
 import pandas as pd
 import pytest
 import rasterio
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from rasterio.transform import Affine
 from shapely.geometry import box
@@ -488,6 +488,7 @@ def test_every_transform_can_be_named_in_a_study_file(inputs):
         assert prevmap.read_study(inputs / "study.toml").covariates[0].transform == name
 
 
+@settings(deadline=None)  # a busy machine is no fault
 @given(
     st.lists(st.tuples(st.floats(-1e6, 1e6), st.floats(-1e6, 1e6)), min_size=1, max_size=30),
     st.floats(100.0, 1e4),
