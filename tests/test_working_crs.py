@@ -22,7 +22,7 @@ def test_utm_scale_at_the_central_meridian_is_its_published_value():
     # The central scale factor of UTM is 0.9996 (Snyder 1987, USGS Professional Paper 1395, p. 57).
     assert distance_distortion(CRS.from_epsg(32636), np.array([33.0]), np.array([-12.0])) == pytest.approx(
         4e-4, abs=1e-8
-    )  # scale factors are printed to 8 digits
+    )  # a step of a kilometre
 
 
 def test_azimuthal_equal_area_scale_follows_snyder():
@@ -102,3 +102,22 @@ def test_impossible_degrees_and_systems_without_a_place_on_earth_are_input_error
         choose_working_crs(boxes(400e3, 8.5e6, 600e3, 8.6e6), CRS.from_epsg(4326))
     with pytest.raises(InputError, match="neither geographic nor projected"):
         choose_working_crs(boxes(0, 0, 1, 1), CRS.from_epsg(4978))
+
+
+def test_scale_on_the_ellipsoid_is_not_taken_for_that_of_a_sphere():
+    # At the equator a metre north is stretched by a / M = 1 / (1 - e2) on this map, a metre east by nothing;
+    # e2 = 0.00669438 (World Geodetic System 1984).
+    web = distance_distortion(CRS.from_epsg(3857), np.array([10.0]), np.array([0.0]))
+    assert web == pytest.approx(1.0 / (1.0 - 0.00669438) - 1.0, abs=1e-7)  # a step of a kilometre
+
+
+def test_grads_from_another_meridian_of_zero_are_understood():
+    paris = CRS.from_epsg(4807)
+    working = choose_working_crs(boxes(0.0, 49.0, 3.0, 53.0), paris)  # in grads
+    assert working.distortion < 0.001
+    # The published scale factor at the centre of this zone is 0.99987742 (EPSG:27572, from memory).
+    zone = CRS.from_epsg(27572)
+    centre = np.array([0.0]), np.array([46.8])
+    assert distance_distortion(zone, *centre) == pytest.approx(
+        1.0 - 0.99987742, abs=1e-7
+    )  # a step of a kilometre

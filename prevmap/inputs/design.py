@@ -388,9 +388,8 @@ def _collinear(X: Floats, terms: tuple[str, ...]) -> list[Finding]:
         return [Finding(None, None, None, "warning", what, action)]
     findings = []
     with np.errstate(divide="ignore", invalid="ignore"), warnings.catch_warnings():
-        warnings.simplefilter(
-            "ignore", RuntimeWarning
-        )  # an exact combination divides by zero: infinite factor
+        # An exact combination divides by zero: its factor is infinite.
+        warnings.simplefilter("ignore")
         factors = [float(variance_inflation_factor(X, term)) for term in range(1, X.shape[1])]
         likeness = np.asarray(np.corrcoef(X[:, 1:], rowvar=False))
     np.fill_diagonal(likeness, 0.0)

@@ -11,7 +11,7 @@ import numpy as np
 import pandas as pd
 import shapely
 from numpy.typing import NDArray
-from pyproj import CRS, Proj, Transformer
+from pyproj import CRS, Transformer
 from scipy.interpolate import RegularGridInterpolator
 
 from prevmap.errors import InputError
@@ -22,6 +22,7 @@ from prevmap.inputs.raster import Raster, open_raster
 Floats = NDArray[np.float64]
 
 PIXELS_AT_ONCE = 4_000_000  # 32 MB of float64; larger blocks are halved first
+LATTICE = 9  # points along each side of a block where the areal scale is taken
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -170,8 +171,8 @@ def pixel_area_km2(raster: Raster, row: int, col: int, rows: int, cols: int) -> 
     Notes
     -----
     Geographic rasters: the area between two parallels and two meridians (Snyder 1987, eq. 3-12, the
-    authalic q). Projected rasters: the flat area divided by the projection's areal scale, interpolated from
-    a lattice over the block.
+    authalic q). Projected rasters: the flat area divided by the areal scale, taken from geodesic squares on a
+    lattice over the block and interpolated.
     """
     left, bottom, right, top = raster.edges(row, col, rows, cols)
     crs = raster.crs
@@ -182,17 +183,30 @@ def pixel_area_km2(raster: Raster, row: int, col: int, rows: int, cols: int) -> 
         return ((zone[:-1] - zone[1:]) * raster.width * degree)[:, None]
     metre = float(crs.axis_info[0].unit_conversion_factor)
     flat = raster.width * raster.height * metre**2 / 1e6
-    x, y = np.linspace(left, right, 9), np.linspace(bottom, top, 9)
-    across, up = np.meshgrid(x, y)
-    lon, lat = Transformer.from_crs(crs, crs.geodetic_crs, always_xy=True).transform(across, up)
-    scale = np.asarray(Proj(crs).get_factors(lon, lat, errcheck=False).areal_scale).reshape(across.shape)
+    x, y = np.linspace(left, right, LATTICE), np.linspace(bottom, top, LATTICE)
+    across, up = (each.ravel() for each in np.meshgrid(x, y))
+    scale = _areal_scale(across, up, 0.5 * max(raster.width, raster.height, 1000.0 / metre), crs)
     if not np.isfinite(scale).all():
         raise InputError(f"{raster.path}: parts of the raster lie where {crs.name!r} has no area.")
     centres_x = left + raster.width * (np.arange(cols) + 0.5)
     centres_y = top - raster.height * (np.arange(rows) + 0.5)
-    smooth = RegularGridInterpolator((y, x), scale, method="linear")
+    smooth = RegularGridInterpolator((y, x), scale.reshape(LATTICE, LATTICE), method="linear")
     mesh = np.meshgrid(centres_y, centres_x, indexing="ij")
     return flat / np.asarray(smooth((mesh[0], mesh[1])), dtype=float)
+
+
+def _areal_scale(x: Floats, y: Floats, half: float, crs: CRS) -> Floats:
+    """Return flat over geodesic area of squares with centres (k,) `x`, `y` and sides of twice `half`."""
+    metre = float(crs.axis_info[0].unit_conversion_factor)
+    geod = crs.get_geod()
+    if geod is None:
+        raise InputError(f"{crs.name!r} has no ellipsoid, so that areas cannot be computed.")
+    corners_x = x[:, None] + half * np.array([-1.0, 1.0, 1.0, -1.0])
+    corners_y = y[:, None] + half * np.array([-1.0, -1.0, 1.0, 1.0])
+    lon, lat = Transformer.from_crs(crs, crs.geodetic_crs, always_xy=True).transform(corners_x, corners_y)
+    areas = [abs(geod.polygon_area_perimeter(*each)[0]) for each in zip(lon, lat, strict=True)]
+    with np.errstate(divide="ignore"):
+        return (2.0 * half * metre) ** 2 / np.asarray(areas, dtype=float)
 
 
 def _zone_area_km2(latitude: Floats, crs: CRS) -> Floats:

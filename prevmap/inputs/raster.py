@@ -194,23 +194,21 @@ def sample(raster: Raster, x: Floats, y: Floats) -> Floats:
 
 
 def _sample_tile(raster: Raster, source: Any, across: Floats, down: Floats) -> Floats:
-    first_col = max(int(np.floor(across.min())), 0)
-    first_row = max(int(np.floor(down.min())), 0)
-    last_col = min(int(np.floor(across.max())) + 2, raster.cols)
-    last_row = min(int(np.floor(down.max())) + 2, raster.rows)
+    # Fractions are taken before the tile is known, so that tiles change no bit of a value.
+    col, row = np.floor(across).astype(np.int64), np.floor(down).astype(np.int64)
+    right, lower = across - col, down - row
+    own_col = np.clip(np.floor(across + 0.5).astype(np.int64), 0, raster.cols - 1)
+    own_row = np.clip(np.floor(down + 0.5).astype(np.int64), 0, raster.rows - 1)
+    first_col, first_row = max(int(col.min()), 0), max(int(row.min()), 0)
+    last_col, last_row = min(int(col.max()) + 2, raster.cols), min(int(row.max()) + 2, raster.rows)
     block = raster.read(first_row, first_col, last_row - first_row, last_col - first_col, source)
     # A rim without values turns "beyond the edge" into "a neighbour has no value".
-    rimmed = np.pad(block, 1, constant_values=np.nan)
-    across, down = across - first_col + 1.0, down - first_row + 1.0
-    col, row = np.floor(across).astype(np.int64), np.floor(down).astype(np.int64)
-    col, row = np.minimum(col, rimmed.shape[1] - 2), np.minimum(row, rimmed.shape[0] - 2)
-    right, lower = across - col, down - row
+    rimmed = np.pad(block, ((1, 2), (1, 2)), constant_values=np.nan)
+    col, row = col - first_col + 1, row - first_row + 1
     mixed = (1.0 - lower) * ((1.0 - right) * rimmed[row, col] + right * rimmed[row, col + 1]) + lower * (
         (1.0 - right) * rimmed[row + 1, col] + right * rimmed[row + 1, col + 1]
     )
-    own_row = np.clip(np.floor(down + 0.5).astype(np.int64), 1, rimmed.shape[0] - 2)
-    own_col = np.clip(np.floor(across + 0.5).astype(np.int64), 1, rimmed.shape[1] - 2)
-    return np.where(np.isfinite(mixed), mixed, rimmed[own_row, own_col])
+    return np.where(np.isfinite(mixed), mixed, rimmed[own_row - first_row + 1, own_col - first_col + 1])
 
 
 def describe_bounds(bounds: Bounds) -> str:

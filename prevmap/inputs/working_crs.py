@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 import shapely
 from numpy.typing import NDArray
-from pyproj import CRS, Proj, Transformer
+from pyproj import CRS, Transformer
 from pyproj.crs import ProjectedCRS
 from pyproj.crs.coordinate_operation import (
     AlbersEqualAreaConversion,
@@ -25,6 +25,7 @@ Floats = NDArray[np.float64]
 ANOTHER_ABOVE = 0.005  # distance distortion above which another projection is worth choosing
 WARN_ABOVE = 0.02  # distance distortion above which results are weaker
 LATTICE = 25  # sample points along each side of the region's bounding box
+HALF_STEP_M = 500.0  # scale is the map's length of a kilometre on the ellipsoid
 OUTLINE = 400  # sample points on the region's convex hull
 
 
@@ -89,7 +90,8 @@ def choose_working_crs(geometries: NDArray[Any], crs: CRS) -> WorkingCrs:
     check_degrees(geometries, crs)
     lon, lat = sample_lonlat(geometries, crs)
     scored = [
-        (distance_distortion(candidate, lon, lat), candidate) for candidate in candidates(crs, lon, lat)
+        (distance_distortion(candidate, lon, lat), candidate)
+        for candidate in candidates(degrees_of(crs), lon, lat)
     ]
     distortion, chosen = min(scored, key=lambda pair: pair[0])
     return WorkingCrs(chosen, distortion, tuple(_chosen_findings(chosen, distortion)))
@@ -116,6 +118,20 @@ def in_metres(crs: CRS) -> CRS:
     return CRS.from_json_dict(parts)
 
 
+def degrees_of(crs: CRS) -> CRS:
+    """Return the geographic system a coordinate system stands on, in degrees (some old ones are in grads)."""
+    if crs.geodetic_crs is None:
+        raise InputError(f"The coordinate system {crs.name!r} stands on no longitude and latitude.")
+    base = crs.geodetic_crs.to_2d()
+    if all(axis.unit_name == "degree" for axis in base.axis_info):
+        return base
+    parts = base.to_json_dict()
+    for axis in parts["coordinate_system"]["axis"]:
+        axis["unit"] = "degree"
+    parts.pop("id", None)
+    return CRS.from_json_dict(parts)
+
+
 def distance_distortion(crs: CRS, lon: Floats, lat: Floats) -> float:
     """Return the largest |scale - 1| of short distances over points given in degrees.
 
@@ -130,11 +146,27 @@ def distance_distortion(crs: CRS, lon: Floats, lat: Floats) -> float:
     -------
     float
         Infinite where the projection cannot show one of the points.
+
+    Notes
+    -----
+    The semi-axes of Tissot's indicatrix are the singular values of the map's derivative, taken here from
+    geodesics of a kilometre: printed scale factors of some projections assume a sphere.
     """
-    factors = Proj(crs).get_factors(lon, lat, errcheck=False)
-    axes = np.concatenate([np.ravel(factors.tissot_semimajor), np.ravel(factors.tissot_semiminor)])
-    axes = np.where(np.isfinite(axes) & (axes < 1e6), axes, np.inf)
-    return float(np.max(np.abs(axes - 1.0)))
+    geod, flat = crs.get_geod(), Transformer.from_crs(degrees_of(crs), crs, always_xy=True)
+    if geod is None:
+        raise InputError(f"{crs.name!r} has no ellipsoid, so that distances cannot be checked.")
+    columns = []
+    for azimuth in (90.0, 0.0):
+        ends = []
+        for turn in (0.0, 180.0):
+            there = geod.fwd(lon, lat, np.full(len(lon), azimuth + turn), np.full(len(lon), HALF_STEP_M))
+            ends.append(np.asarray(flat.transform(there[0], there[1]), dtype=float))
+        columns.append((ends[0] - ends[1]) / (2.0 * HALF_STEP_M))
+    # (n, 2, 2): metres on the map for a metre east and a metre north on the ground.
+    change = np.stack(columns, axis=-1).transpose(1, 0, 2)
+    if not np.isfinite(change).all():
+        return float("inf")
+    return float(np.max(np.abs(np.linalg.svd(change, compute_uv=False) - 1.0)))
 
 
 def candidates(crs: CRS, lon: Floats, lat: Floats) -> list[CRS]:
@@ -177,7 +209,7 @@ def sample_lonlat(geometries: NDArray[Any], crs: CRS) -> tuple[Floats, Floats]:
         rim = hull[:: max(1, len(hull) // OUTLINE)]
         inside = _lattice_inside(geometries, corners)
     points = np.vstack([rim, inside])
-    to_degrees = Transformer.from_crs(crs, crs.geodetic_crs, always_xy=True)
+    to_degrees = Transformer.from_crs(crs, degrees_of(crs), always_xy=True)
     lon, lat = to_degrees.transform(points[:, 0], points[:, 1])
     lon, lat = np.asarray(lon, float), np.asarray(lat, float)
     usable = np.isfinite(lon) & np.isfinite(lat)
@@ -219,7 +251,7 @@ def check_degrees(geometries: NDArray[Any], crs: CRS, source: str = "") -> None:
     """Raise an InputError where coordinates of geometries in a geographic `crs` are impossible as degrees."""
     corners = shapely.get_coordinates(geometries)
     impossible = (np.abs(corners[:, 0]) > 360.0) | (np.abs(corners[:, 1]) > 90.0)
-    if crs.is_geographic and impossible.any():
+    if crs.is_geographic and crs == degrees_of(crs) and impossible.any():
         x, y = corners[impossible][0]
         where = f"{source}: " if source else ""
         raise InputError(
