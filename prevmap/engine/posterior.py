@@ -27,9 +27,10 @@ log = logging.getLogger("prevmap")
 _STEP = (
     1.5  # lattice step in posterior standard deviations: trapezoid error about 2 exp(-2 pi^2/step^2) = 3e-4
 )
-_DROP = 2.5  # a lattice point this far below the mode (log scale) has no neighbours added
+_DROP = 2.5  # a lattice point this far below the mode (log scale) gets neighbours only where a slow tail asks
+_TAIL = 0.01  # mass beyond the last point of a line, relative to that at the mode
 _MOST_POINTS = 150
-_DROPPED_MASS = 1e-3
+_DROPPED_MASS = 3e-3
 _FLATTEST = 0.05  # smallest curvature of the log posterior taken at face value
 _DIFFERENCE = 0.02  # step in theta for the curvature from exact gradients
 _GRADIENT = 0.02  # largest slope of the log posterior left at the mode
@@ -291,8 +292,26 @@ def infer(
     )  # fmt: skip
 
 
+def _neighbour(at: tuple[int, ...], axis: int, side: int) -> tuple[int, ...]:
+    return tuple(c + side * (i == axis) for i, c in enumerate(at))
+
+
+def _worth_extending(height: float, inner: float | None, here: float) -> bool:
+    """Whether the lattice goes on beyond a point: it is high, or the density falls off slowly there.
+
+    With the fall ``f`` from the point's inner neighbour, a tail that goes on falling like that holds
+    ``exp(height) e^-f / (1 - e^-f)`` of the mass at the mode.
+    """
+    if height >= -_DROP:
+        return True
+    if inner is None or inner <= here:
+        return False
+    fall = inner - here
+    return float(np.exp(height - fall) / -np.expm1(-fall)) > _TAIL
+
+
 def _carrying(mass: NDArray[np.float64]) -> NDArray[np.int64]:
-    """Points that carry all but a thousandth of the mass, in their order; the others only cost time."""
+    """Points that carry all but a few thousandths of the mass, in their order; the others only cost time."""
     order = np.argsort(-mass, kind="stable")
     enough = int(np.searchsorted(np.cumsum(mass[order]), (1.0 - _DROPPED_MASS) * np.sum(mass))) + 1
     return np.sort(order[:enough])
@@ -406,11 +425,12 @@ class _Search:
         queue = [origin]
         while queue and len(states) < _MOST_POINTS:
             parent = queue.pop(0)
-            if values[parent] < peak.log_posterior - _DROP:
-                continue
             for j, side in itertools.product(range(d), (-1, 1)):
-                child = tuple(c + side * (i == j) for i, c in enumerate(parent))
+                child = _neighbour(parent, j, side)
                 if child in values or len(states) >= _MOST_POINTS:
+                    continue
+                inner = values.get(_neighbour(parent, j, -side))
+                if not _worth_extending(values[parent] - peak.log_posterior, inner, values[parent]):
                     continue
                 at = peak.values + peak.basis @ (_STEP * np.array(child))
                 if not np.all((at > lower) & (at < upper)):
