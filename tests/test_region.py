@@ -281,3 +281,9 @@ def test_a_region_prints_itself_with_escaped_findings(tmp_path):
     assert "Distances off by at most" in region._repr_html_()
     assert "<i>" not in region._repr_html_()
     assert isinstance(region.findings, pd.DataFrame)
+
+
+def test_the_buffer_does_not_shrink_to_the_spacing_of_close_pairs():
+    # Nearest distances 1, 1 and 48.4 km; the extent's diagonal is 50 km.
+    region = hull_region(gpd.GeoSeries.from_xy([400e3, 401e3, 440e3], [8.5e6, 8.5e6, 8.53e6], crs=UTM))
+    assert region.buffer_km == pytest.approx(2.5, rel=ALGEBRA)
