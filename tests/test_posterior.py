@@ -54,7 +54,7 @@ def test_a_gaussian_is_integrated_exactly():
     mean = np.array([3.0, 0.4, -1.0])
     root = np.array([[1.5, 0.0, 0.0], [0.8, 2.0, 0.0], [-0.5, 0.3, 3.0]])
     precision = root @ root.T
-    engine, problem = Shape(gaussian(mean, precision)), outer(mean + [1.5, -1.0, 0.8])
+    engine, problem = Shape(gaussian(mean, precision)), outer(mean + np.array([1.5, -1.0, 0.8]))
     peak = find_peak(engine, problem)
     assert peak.evaluations == engine.count
     np.testing.assert_allclose(

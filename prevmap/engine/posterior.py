@@ -30,6 +30,8 @@ _STEP = (
 _DROP = 2.5  # a lattice point this far below the mode (log scale) gets neighbours only where a slow tail asks
 _TAIL = 0.01  # mass beyond the last point of a line, relative to that at the mode
 _MOST_POINTS = 150
+_NEGLIGIBLE = 12.0  # points this far below the mode only disturb an interpolant
+_OFFSET = 0.25  # where a slope is turned into a value, in posterior standard deviations
 _DROPPED_MASS = 3e-3
 _FLATTEST = 0.05  # smallest curvature of the log posterior taken at face value
 _DIFFERENCE = 0.02  # step in theta for the curvature from exact gradients
@@ -275,7 +277,7 @@ def infer(
             peak.evaluations, peak.iterations, peak.gradient_norm, peak.warnings,
         )  # fmt: skip
     search = _Search(engine, outer, peak.state.mode, tick)
-    points, values, states = search.lattice(peak)
+    points, values, slopes, states = search.lattice(peak)
     warnings = list(peak.warnings)
     if len(states) >= _MOST_POINTS:
         warnings.append(
@@ -287,7 +289,7 @@ def infer(
     kept = _carrying(mass)
     return Posterior(
         tuple(states[k] for k in kept), mass[kept] / np.sum(mass[kept]), evidence, peak.state,
-        _marginals(points, values, peak.values, peak.basis, index),
+        _marginals(points, values, slopes, peak, index),
         peak.evaluations + search.count, peak.iterations + search.iterations, peak.gradient_norm, tuple(warnings),
     )  # fmt: skip
 
@@ -415,12 +417,15 @@ class _Search:
             out[j] = -(up - down) / (2.0 * _DIFFERENCE)
         return 0.5 * (out + out.T)
 
-    def lattice(self, peak: Peak) -> tuple[NDArray[np.float64], NDArray[np.float64], list[Any]]:
-        """Points z on the lattice, their log posterior and states, grown from the mode outward."""
+    def lattice(
+        self, peak: Peak
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64], list[Any]]:
+        """Points z on the lattice grown from the mode outward: log posterior, its slope in z, states."""
         d = peak.values.size
         lower, upper = self.outer.lower[self.outer.free], self.outer.upper[self.outer.free]
         origin = (0,) * d
         values = {origin: peak.log_posterior}
+        slopes = {origin: np.zeros(d)}
         states = {origin: peak.state}
         queue = [origin]
         while queue and len(states) < _MOST_POINTS:
@@ -435,12 +440,14 @@ class _Search:
                 at = peak.values + peak.basis @ (_STEP * np.array(child))
                 if not np.all((at > lower) & (at < upper)):
                     continue
-                values[child], _, states[child] = self.evaluate(at, "integration", states[parent].mode)
+                values[child], gradient, states[child] = self.evaluate(at, "integration", states[parent].mode)
+                slopes[child] = peak.basis.T @ gradient
                 queue.append(child)
         keys = list(values)
         return (
             _STEP * np.array(keys, dtype=float).reshape(len(keys), d),
             np.array([values[k] for k in keys]),
+            np.array([slopes[k] for k in keys]),
             [states[k] for k in keys],
         )
 
@@ -448,29 +455,32 @@ class _Search:
 def _marginals(
     points: NDArray[np.float64],
     values: NDArray[np.float64],
-    mode: NDArray[np.float64],
-    basis: NDArray[np.float64],
+    slopes: NDArray[np.float64],
+    peak: Peak,
     index: NDArray[np.int64],
 ) -> dict[int, tuple[NDArray[np.float64], NDArray[np.float64]]]:
     """Discrete marginals of theta on a fine lattice, through an interpolant of the log density.
 
-    A cubic radial interpolant with a quadratic part reproduces a Gaussian exactly and bends with skewness.
+    The slopes enter as two more values close to each point on every axis. A cubic radial interpolant with a
+    quadratic part reproduces a Gaussian exactly and bends with skewness.
     """
     d = points.shape[1]
-    needed = (d + 1) * (d + 2) // 2
-    fine_step = 0.1 if d == 1 else 0.25
-    axes = [
-        np.arange(points[:, j].min() - _STEP / 2, points[:, j].max() + _STEP, fine_step) for j in range(d)
-    ]
+    high = values > values.max() - _NEGLIGIBLE
+    z, v, g = points[high], values[high] - values.max(), slopes[high]
+    known, heights = [z], [v]
+    for j, side in itertools.product(range(d), (-1.0, 1.0)):
+        shift = side * _OFFSET
+        known.append(z + shift * np.eye(d)[j])
+        heights.append(v + shift * g[:, j] - 0.5 * shift**2)  # unit curvature, the scale of z
+    fine_step = 0.05 if d == 1 else 0.25
+    axes = [np.arange(z[:, j].min() - _STEP / 2, z[:, j].max() + _STEP, fine_step) for j in range(d)]
     fine = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, d)
-    distance, _ = cKDTree(points).query(fine, p=np.inf)
+    distance, _ = cKDTree(z).query(fine, p=np.inf)
     fine = fine[distance <= _STEP / 2 + 1e-9]
-    spread = np.all(np.ptp(points, axis=0) > _STEP * 1.5)
-    degree = 2 if len(points) > needed and spread else 1
-    density = RBFInterpolator(points, values - values.max(), kernel="cubic", degree=degree)(fine)
+    density = RBFInterpolator(np.concatenate(known), np.concatenate(heights), kernel="cubic", degree=2)(fine)
     weight = np.exp(np.minimum(density, 1.0))
     weight /= weight.sum()
-    theta = mode + fine @ basis.T
+    theta = peak.values + fine @ peak.basis.T
     return {int(j): (theta[:, at], weight) for at, j in enumerate(index)}
 
 
