@@ -29,7 +29,13 @@ from prevmap.inputs.placement import assign_units, assign_unplaced, site_finding
 from prevmap.inputs.region import Region, hull_region
 from prevmap.inputs.survey import Survey
 from prevmap.model import meshing
-from prevmap.model.prior import Resolved, coefficient_prior, prior_sentences, resolve_priors
+from prevmap.model.prior import (
+    Resolved,
+    coefficient_prior,
+    default_margin_km,
+    prior_sentences,
+    resolve_priors,
+)
 from prevmap.model.rows import Rows, pool_rows, row_accuracy
 from prevmap.model.spec import SMOOTHNESS, PrevalenceModel
 
@@ -238,7 +244,7 @@ def fit_model(
     if region is None:
         region = hull_region(survey.frame.geometry)
     resolved = resolve_priors(model.priors, meshing.diagonal_km(region.boundary))
-    margin_km = model.mesh.margin_km or _default_margin(resolved[0])
+    margin_km = model.mesh.margin_km or default_margin_km(resolved[0])
     inside, position_findings = site_findings(survey.frame, region, margin_km)
     if not np.any(inside):
         raise InputError(
@@ -288,10 +294,6 @@ def fit_model(
         prior_sentences(model.priors, resolved, len(designed.terms)),
         diagnostics, posterior, core, rows,
     )  # fmt: skip
-
-
-def _default_margin(of_range: Resolved) -> float:
-    return float(f"{of_range.middle * (1.0 if of_range.free else 1.2):.3g}")
 
 
 def _run(

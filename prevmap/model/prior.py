@@ -95,3 +95,8 @@ def coefficient_prior(priors: Priors, terms: int) -> tuple[np.ndarray, np.ndarra
     mean, sd = np.zeros(terms), np.full(terms, float(priors.coefficient_sd))
     mean[0], sd[0] = priors.intercept
     return mean, sd
+
+
+def default_margin_km(of_range: Resolved) -> float:
+    """Margin of the mesh before a look at the data: the range to be expected, a little more where it is fixed."""
+    return float(f"{of_range.middle * (1.0 if of_range.free else 1.2):.3g}")

@@ -14,8 +14,7 @@ from prevmap.inputs.design import design
 from prevmap.inputs.findings import findings_frame
 from prevmap.inputs.placement import assign_units, assign_unplaced, site_findings
 from prevmap.model import meshing
-from prevmap.model.fit import _default_margin as default_margin_km
-from prevmap.model.prior import resolve_priors
+from prevmap.model.prior import default_margin_km, resolve_priors
 from prevmap.model.rows import row_accuracy
 from prevmap.model.spec import PrevalenceModel
 from prevmap.study.chain import StudyInputs, build_model, joined_findings, naming, read_inputs
