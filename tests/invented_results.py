@@ -160,6 +160,7 @@ def invented_results(seed=1, *, names=None, lake=True, population=True, cell_m=2
         seed=1,
         sites=sites,
         n_sites=k,
+        n_rows=k,
         n_examined=int(examined.sum()),
         n_positive=int(positive.sum()),
         log_evidence=-182.4417,

@@ -157,7 +157,7 @@ def test_the_summary_says_what_was_surveyed_and_decided(results):
     text = " ".join(summary_sentences(content)).replace("\u00a0", " ")
     fit = results.fit
     assert f"examined {fit.n_examined:,} people at 60 sites; {fit.n_positive} were positive" in text
-    assert "2 findings led to a row or value not being used" in text
+    assert "Of 62 rows read, 60 entered the model; 2 were not used" in text
     assert f"Of 12 units, {counts['above']} " in text
     assert f"{counts['undecided']} " in text
     assert "at a certainty of at least 90 %" in text

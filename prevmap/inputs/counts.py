@@ -143,7 +143,7 @@ def _row_remarks(at: int, examined: Reading, positive: Reading) -> list[Remark]:
     if remarks:
         return remarks
     if examined.value == 0 and not positive.value:
-        return [Remark(at, "examined", "error", "examined is 0: nobody was examined", "row not used")]
+        return [Remark(at, "examined", "warning", "examined is 0: nobody was examined", "row not used")]
     if (positive.value or 0) > (examined.value or 0):
         what = f"positive ({positive.value:.0f}) is greater than examined ({examined.value:.0f})"
         remarks.append(Remark(at, "positive", "error", what, "row not used"))

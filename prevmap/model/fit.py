@@ -69,6 +69,8 @@ class Fit:
         Everything found wrong or doubtful in survey, region and covariates.
     warnings : tuple of str
         What makes the fit weaker without making it wrong.
+    n_rows : int
+        Survey rows the model was fitted to.
     sites : GeoDataFrame
         Pooled observations in the working coordinate system: site, examined, positive, proportion, unit.
     prior_text : tuple of (name, sentence)
@@ -89,6 +91,7 @@ class Fit:
     findings: pd.DataFrame
     warnings: tuple[str, ...]
     sites: gpd.GeoDataFrame
+    n_rows: int
     row_units: NDArray[np.int64]
     unplaced_units: NDArray[np.int64]
     prior_text: tuple[tuple[str, str], ...]
@@ -290,7 +293,7 @@ def fit_model(
         _all_findings(survey, region, designed, found),
         tuple(warnings),
         _sites(rows, row_units[kept], region),
-        row_units, unplaced_units,
+        len(frame), row_units, unplaced_units,
         prior_sentences(model.priors, resolved, len(designed.terms)),
         diagnostics, posterior, core, rows,
     )  # fmt: skip

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from prevmap.show.report.methods import integrated
+from prevmap.show.report.summary import rows_sentence
 from prevmap.show.wording import NOT_STATED, count, file_name, listed, noted
 
 if TYPE_CHECKING:
@@ -98,12 +99,7 @@ def _what(content: ReportContent) -> str:
 
 
 def _inclusion(content: ReportContent) -> str:
-    refused = int((content.fit.findings["severity"] == "error").sum())
-    return (
-        f"{content.survey.rows_read:,} rows read; {count(refused, 'finding')} led to a row or "
-        "value not being used, "
-        'listed in the section "What was excluded and why".'
-    )
+    return f'{rows_sentence(content)} See the section "What was excluded and why".'
 
 
 def _survey_line(content: ReportContent) -> str:

@@ -30,11 +30,7 @@ def summary_sentences(content: ReportContent) -> list[str]:
         f"The survey examined {count(fit.n_examined, 'person', 'people')} at {count(fit.n_sites, 'site')}; "
         f"{fit.n_positive:,} were positive ({raw}, raw)."
     ]
-    refused = int((fit.findings["severity"] == "error").sum())
-    if refused:
-        sentences.append(
-            f"{count(refused, 'finding')} led to a row or value not being used; all are listed below."
-        )
+    sentences.append(rows_sentence(content))
     if content.decisions is not None:
         sentences += _decided(content)
     elif content.thresholds:
@@ -44,6 +40,19 @@ def summary_sentences(content: ReportContent) -> list[str]:
             "No threshold was set, so nothing is said here about places being above or below one."
         )
     return sentences
+
+
+def rows_sentence(content: ReportContent) -> str:
+    """Say how many rows were read, how many the model was fitted to, and how many were not used."""
+    read, used, raw = content.survey.rows_read, content.fit.n_rows, len(content.survey.unplaced)
+    left = read - used - raw
+    only = f" and {raw:,} only the raw estimate of its unit" if raw else ""
+    rest = (
+        f"{left:,} {'was' if left == 1 else 'were'} not used, for reasons listed below"
+        if left
+        else "all were used"
+    )
+    return f"Of {count(read, 'row')} read, {used:,} entered the model{only}; {rest}."
 
 
 def headline_counts(content: ReportContent) -> list[tuple[str, str, str]]:
