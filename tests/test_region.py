@@ -5,10 +5,13 @@ import numpy as np
 import pandas as pd
 import pytest
 import shapely
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from pyproj import CRS, Geod
 
 import prevmap
 from prevmap.errors import InputError
+from prevmap.inputs.attributes import attribute, free_names, is_own_column
 from prevmap.inputs.region import hull_region
 from tests.tolerances import ALGEBRA
 
@@ -126,8 +129,61 @@ def test_numeric_codes_read_as_whole_numbers_and_own_columns_are_renamed(tmp_pat
     path = pair(tmp_path, name=["a", "b"], pcode=[101.0, 102.0], code=["x", "y"])
     region = prevmap.read_region(path, name="name", code="pcode")
     assert region.units["code"].tolist() == ["101", "102"]
-    assert region.units["code (file)"].tolist() == ["x", "y"]
-    assert "'code' of its own" in whats(region, "note")[0]
+    assert region.units["code_in_region"].tolist() == ["x", "y"]
+    assert "column 'code' has the name" in whats(region, "note")[0]
+
+
+def test_attributes_leave_the_names_of_our_own_columns_free(tmp_path):
+    values = {"Decision": ["a", "b"], "p_class_1": [0, 1], "exceedance_0.1": [2, 3], "Population": [4, 5]}
+    path = write(
+        tmp_path,
+        [square(400e3, 8.5e6), square(410e3, 8.5e6)],
+        file="units.geojson",
+        district=["Oru", "Tavo"],
+        zone=["n", "s"],
+        **values,
+    )
+    region = prevmap.read_region(path, name="district")
+    for name, expected in values.items():
+        assert name not in region.units.columns
+        assert region.units[f"{name}_in_region"].tolist() == expected
+        assert attribute(region.units, name).tolist() == expected
+    assert region.units["zone"].tolist() == ["n", "s"]
+    notes = region.findings[region.findings["severity"] == "note"]
+    assert set(notes["field"]) == set(values)
+    assert "kept as 'Decision_in_region'" in notes["action"].tolist()
+
+
+def test_names_that_differ_by_case_only_are_told_apart(tmp_path):
+    names, findings = free_names(["Zone", "zone", "ZONE", "zone_2", "sites", "sites_in_region", "Sites"])
+    assert names == [
+        "Zone", "zone_2_2", "ZONE_2_3", "zone_2", "sites_in_region_2", "sites_in_region", "Sites_in_region_3"
+    ]  # fmt: skip
+    assert len({name.casefold() for name in names}) == len(names)
+    assert [finding.severity for finding in findings] == ["note"] * 4
+    path = write(
+        tmp_path,
+        [square(400e3, 8.5e6), square(410e3, 8.5e6)],
+        file="units.geojson",
+        district=["Oru", "Tavo"],
+        Zone=["n", "s"],
+        zone=["1", "2"],
+    )
+    region = prevmap.read_region(path, name="district")
+    region.units.to_file(tmp_path / "again.gpkg")
+    again = gpd.read_file(tmp_path / "again.gpkg")
+    assert (again["Zone"].tolist(), again["zone_2"].tolist()) == (["n", "s"], ["1", "2"])
+    assert any("only by case" in what for what in whats(region, "note"))
+
+
+@settings(max_examples=60, deadline=None, derandomize=True)
+@given(st.lists(st.sampled_from(["a", "A", "a_2", "Mean", "mean", "mean_in_region", "fid", "Geom", "x"])))
+def test_attribute_names_are_free_and_distinct_whatever_the_file_says(names):
+    names = list(dict.fromkeys(names))
+    free, findings = free_names(names)
+    assert len({name.casefold() for name in free}) == len(names)
+    assert not any(is_own_column(name) for name in free)
+    assert len(findings) == sum(old != new for old, new in zip(names, free, strict=True))
 
 
 def test_missing_empty_and_wrong_files(tmp_path):

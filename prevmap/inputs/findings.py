@@ -113,3 +113,14 @@ def listed(items: Iterable[object], most: int = 5) -> str:
     texts = [str(item) for item in items]
     shown = ", ".join(texts[:most])
     return shown if len(texts) <= most else f"{shown} and {len(texts) - most} more"
+
+
+def number_text(value: float) -> str:
+    """Return a distance or an area for a message: three figures, whole and with thousands from 100.
+
+    Examples
+    --------
+    >>> number_text(2.114), number_text(99.97), number_text(1021.4)
+    ('2.11', '100', '1,021')
+    """
+    return f"{value:,.0f}" if abs(value) >= 100.0 else f"{value:.3g}"

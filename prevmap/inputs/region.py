@@ -16,7 +16,8 @@ from pyproj import CRS
 from scipy.spatial import cKDTree
 
 from prevmap.errors import InputError
-from prevmap.inputs.findings import Finding, findings_frame
+from prevmap.inputs.attributes import free_names
+from prevmap.inputs.findings import Finding, findings_frame, number_text
 from prevmap.inputs.grid import build_grid
 from prevmap.inputs.layer import column, features, label_text, polygons, read_layer, reproject
 from prevmap.inputs.placement import assign_units, assign_unplaced, site_findings
@@ -41,8 +42,9 @@ class Region:
     ----------
     units : GeoDataFrame
         One row per unit in the order of the file: unit (str), code, parent (None where not given), every
-        other attribute of the file, geometry in the working coordinate system (metres), whole: excluded
-        land is not cut out. No rows where the study area is the hull of the sites.
+        other attribute of the file (renamed where the results have a column of that name), geometry in the
+        working coordinate system (metres), whole: excluded land is not cut out. No rows where the study
+        area is the hull of the sites.
     boundary : shapely geometry
         Union of the units without the excluded land, in metres.
     crs : pyproj.CRS
@@ -142,7 +144,7 @@ class Region:
             ("Distances off by at most", f"{100.0 * self.distortion:.2g} %"),
         ]
         if self.buffer_km is not None:
-            facts.append(("Buffer round the sites", f"{self.buffer_km:.3g} km"))
+            facts.append(("Buffer round the sites", f"{number_text(self.buffer_km)} km"))
         rows = "".join(f"<tr><th>{html.escape(k)}</th><td>{html.escape(v)}</td></tr>" for k, v in facts)
         found = self.findings.to_html(index=False, escape=True) if len(self.findings) else ""
         return f"<table>{rows}</table>{found}"
@@ -246,7 +248,7 @@ def hull_region(points: gpd.GeoSeries, *, buffer_km: float | None = None) -> Reg
     used = default_buffer_km(xy / 1000.0) if buffer_km is None else float(buffer_km)
     boundary = shapely.buffer(shapely.convex_hull(shapely.multipoints(xy)), 1000.0 * used, quad_segs=16)
     shapely.prepare(boundary)
-    what = f"no region was given: the study area is the hull of the sites with a buffer of {used:.3g} km"
+    what = f"no region was given: the study area is the hull of the sites with a buffer of {number_text(used)} km"
     note = Finding(None, None, "region", "note", what, "no unit tables are made")
     units = gpd.GeoDataFrame(
         {name: pd.Series([], dtype=object) for name in ("unit", "code", "parent")},
@@ -306,13 +308,10 @@ def _unit_table(
             label_text(value) or None for value in column(plain, parent, source, "parent area")
         ]
     table = table.astype(object)
-    for each in plain.columns:
-        if each in (used, code, parent):
-            continue
-        kept = f"{each} (file)" if each in table.columns or each == "geometry" else each
-        if kept != each:
-            what = f"the file has a column {each!r} of its own"
-            findings.append(Finding(None, None, str(each), "note", what, f"kept as {kept!r}"))
+    others = [each for each in plain.columns if each not in (used, code, parent)]
+    free, renamed = free_names(others)
+    findings += renamed
+    for each, kept in zip(others, free, strict=True):
         table[kept] = plain[each]
     return table.reset_index(drop=True)
 
@@ -370,9 +369,11 @@ def _overlaps(shapes: NDArray[Any], whole: Any, names: list[str]) -> list[Findin
     if not len(large):
         return []
     large = large[np.argsort(-shared[large])]
-    worst = [f"{names[first[k]]} and {names[second[k]]} ({shared[k] / 1e6:.3g} km²)" for k in large[:5]]
+    worst = [
+        f"{names[first[k]]} and {names[second[k]]} ({number_text(shared[k] / 1e6)} km²)" for k in large[:5]
+    ]
     more = f" and {len(large) - 5} more pairs" if len(large) > 5 else ""
-    what = f"units overlap, {shared[large].sum() / 1e6:.3g} km² in all: {'; '.join(worst)}{more}"
+    what = f"units overlap, {number_text(shared[large].sum() / 1e6)} km² in all: {'; '.join(worst)}{more}"
     action = "kept: land and people there count in each of these units, once in the region"
     return [Finding(None, None, "geometry", "warning", what, action)]
 
@@ -390,7 +391,7 @@ def _gaps(whole: Any, excluded: Any) -> list[Finding]:
         return []
     what = (
         f"{len(area_km2)} gap{'s' if len(area_km2) > 1 else ''} inside the region belong to no unit: "
-        f"{area_km2.sum():.3g} km² in all, the largest {area_km2.max():.3g} km²"
+        f"{number_text(area_km2.sum())} km² in all, the largest {number_text(area_km2.max())} km²"
     )
     return [Finding(None, None, "geometry", "warning", what, "left out of the map and of every unit")]
 

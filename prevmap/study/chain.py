@@ -11,6 +11,7 @@ from typing import Any
 import pandas as pd
 
 from prevmap.errors import InputError
+from prevmap.inputs.attributes import attribute
 from prevmap.inputs.covariates import ColumnCovariate, DistanceCovariate, FactorCovariate, RasterCovariate
 from prevmap.inputs.findings import findings_frame
 from prevmap.inputs.grid import Grid
@@ -174,12 +175,13 @@ def _read_population(study: Study, region: Region) -> Population | None:
         return None
     total = settings.unit_total
     if isinstance(total, str):
-        if total not in region.units.columns:
+        found = attribute(region.units, total)
+        if found is None:
             known = ", ".join(str(name) for name in region.units.columns if name != "geometry")
             raise InputError(
                 f'unit_total: found "{total}", no column of {region.source}; accepted: one of {known}'
             )
-        total = dict(zip(region.units["unit"], region.units[total], strict=True))
+        total = dict(zip(region.units["unit"], found, strict=True))
     return read_population(
         settings.raster, kind=settings.kind, ages=settings.ages, year=settings.year, unit_total=total
     )
