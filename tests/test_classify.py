@@ -41,7 +41,7 @@ def drawn_units(matrix, draws=None, basis=None):
             "unit": [f"unit {i}" for i in range(n)],
             "code": [f"U{i}" for i in range(n)],
             "parent": [None] * n,
-            "sites": [5] * n,
+            "sites": [5 if b == "own sites" else 0 for b in basis or ["own sites"] * n],
             "basis": basis or ["own sites"] * n,
             "mean": matrix.mean(axis=0),
         }
@@ -100,6 +100,8 @@ def test_a_unit_without_its_own_sites_stays_undecided_unless_allowed():
     assert frame["decision"].to_list() == ["above", "undecided", "undecided"]
     assert frame["p_class_1"].to_list() == [1.0, 1.0, 1.0]
     assert "no surveyed site in the unit (basis: neighbours)" in frame["reason"].iloc[1]
+    units.frame["sites"] = [5, 2, 0]  # sites that were surveyed but have no position
+    assert "no site with a position in the unit" in classify_units(units, [0.10]).frame["reason"].iloc[1]
     allowed = classify_units(units, [0.10], decide_without_sites=True).frame
     assert allowed["decision"].to_list() == ["above"] * 3
 

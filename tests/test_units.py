@@ -126,6 +126,72 @@ def test_people_are_the_weights_where_they_are_known(fit, tmp_path):
     assert units.frame["infected_mean"].isna().all()  # the survey does not state its ages
 
 
+def test_a_row_that_is_not_used_counts_in_no_unit(tmp_path):
+    region = square_region(tmp_path, units=2)
+    data = survey()
+    far = gpd.GeoDataFrame(
+        {"examined": [1000], "positive": [1000], "unit": ["unit 1"]},
+        geometry=gpd.points_from_xy([460e3], [30e3]),
+        crs=CRS,
+    )
+    frame = pd.concat([data.frame[["examined", "positive", "geometry"]].assign(unit="unit 0"), far])
+    frame = gpd.GeoDataFrame(frame.reset_index(drop=True), crs=CRS)
+    frame.loc[frame.geometry.x > 30e3, "unit"] = "unit 1"
+    both = prevmap.Survey.from_frame(frame, examined="examined", positive="positive", unit="unit")
+    model = prevmap.PrevalenceModel(
+        [], mesh=prevmap.MeshSpec(edge_km=6.0), priors=prevmap.Priors(range_km=30.0)
+    )
+    fit = model.fit(both, region=region, integrate=False)
+    units = fit.units(region.grid(cell_km=10), draws=200)
+    assert units.frame["examined"].sum() == data.frame["examined"].sum()
+    said = fit.findings[fit.findings["row"] == len(frame) - 1]
+    assert "counted" not in " ".join(said["action"])
+    assert fit.n_rows == len(frame) - 1
+
+
+def test_where_the_population_is_not_known_it_is_not_nought(fit, tmp_path):
+    path = tmp_path / "people.tif"
+    people = np.full((60, 60), 2.0, dtype="float32")
+    people[:, :20] = -1  # no value on the first unit
+    people[:, 20:35] = -1  # nor on three quarters of the second
+    with rasterio.open(
+        path, "w", driver="GTiff", height=60, width=60, count=1, dtype="float32", crs=CRS, nodata=-1,
+        transform=rasterio.Affine(1000, 0, 0, 0, -1000, 60e3),
+    ) as target:  # fmt: skip
+        target.write(people, 1)
+    grid = fit.region.grid(cell_km=5, population=prevmap.read_population(path, kind="counts"))
+    np.testing.assert_allclose(grid.people_known, [0.0, 0.25, 1.0], atol=1e-6)  # float32 shares
+    frame = fit.units(grid, draws=200).frame
+    assert np.isnan(frame["population"].iloc[0])
+    assert frame["weighting"].tolist() == ["area", "population", "population"]
+    assert frame["population"].iloc[1] == pytest.approx(600.0, rel=1e-6)
+    said = grid.findings["what"].str.cat(sep=" ")
+    assert "(almost) no value in 'unit 0'" in said
+    assert "'unit 1' (25 %)" in said
+
+
+def test_a_unit_mostly_without_covariates_is_not_decided(tmp_path):
+    region = square_region(tmp_path, units=2)
+    path = tmp_path / "height.tif"
+    heights = np.tile(np.linspace(0, 100, 60), (60, 1)).astype("float32")
+    heights[:, :12] = -9999
+    with rasterio.open(
+        path, "w", driver="GTiff", height=60, width=60, count=1, dtype="float32", crs=CRS, nodata=-9999,
+        transform=rasterio.Affine(1000, 0, 0, 0, -1000, 60e3),
+    ) as target:  # fmt: skip
+        target.write(heights, 1)
+    model = prevmap.PrevalenceModel(
+        [prevmap.RasterCovariate(path, name="height")], mesh=prevmap.MeshSpec(edge_km=6.0)
+    )
+    fit = model.fit(survey(west=15.0), region=region, integrate=False)
+    units = fit.units(region.grid(cell_km=2), draws=400)
+    assert units.frame["share_without_prediction"].iloc[0] == pytest.approx(0.4, abs=0.05)  # whole cells
+    decided = prevmap.classify_units(units, [0.001]).frame
+    assert decided["p_class_1"].min() > 0.95
+    assert decided["decision"].tolist() == ["undecided", "above"]
+    assert "a covariate is missing on" in decided["reason"].iloc[0]
+
+
 def test_worked_population_weighting():
     """Two logit-normal cells, means -2.5 and -1.5, sd 0.6, weights 0.9 and 0.1, against 10 %; computed
     independently for correlations 0 and 0.5. Done on the draws as a unit does it."""

@@ -60,6 +60,8 @@ class Grid:
     pair_people : (k,) float or None
         People in the piece.
     population : Population or None
+    people_known : (n_units,) float or None
+        Share of each unit's land on which the population raster has a value.
     people_unassigned : float
         People who belong to a unit but to no cell: on excluded land, or in an official total of a unit
         where the raster shows nobody.
@@ -81,6 +83,7 @@ class Grid:
     population: Population | None
     people_unassigned: float
     findings: pd.DataFrame
+    people_known: Floats | None = None
 
     @property
     def cell_km(self) -> float:

@@ -25,6 +25,8 @@ Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
 
 CELLS_AT_ONCE = 20_000  # polygons of cells held at once, some 20 MB
+POORLY_KNOWN = 0.05  # share of a unit's land with a population value, below which it is not known
+PARTLY_KNOWN = 0.5  # and below which it is worth a warning
 POORLY_COVERED = 0.05  # share of the land without a population value that is worth a warning
 
 
@@ -69,9 +71,12 @@ def count_people(grid: Grid, population: Population, land: NDArray[Any], progres
         nowhere = np.zeros(len(grid), dtype=np.int64)
         people, covered, whole = counter.pieces(all_cells, nowhere, grid.coverage, boundary, progress)
         pair_people = np.empty(0)
-    if covered == 0.0:
+    if covered.sum() == 0.0:
         raise InputError(_no_overlap(grid, population))
-    findings += _coverage_findings(population, covered, whole)
+    findings += _coverage_findings(population, float(covered.sum()), float(whole.sum()))
+    known = np.divide(covered, whole, out=np.zeros_like(covered), where=whole > 0.0)
+    if grid.region.has_units:
+        findings += _unit_findings(grid, population, known)
     unassigned = _on_excluded_land(grid, population, counter) if grid.region.exclude is not None else 0.0
     if unassigned >= 0.5:
         what = f"{unassigned:,.0f} people of the raster live on excluded land"
@@ -89,6 +94,7 @@ def count_people(grid: Grid, population: Population, land: NDArray[Any], progres
         people=people,
         pair_people=pair_people,
         people_unassigned=float(unassigned),
+        people_known=np.minimum(known, 1.0) if grid.region.has_units else None,
         findings=findings_frame(findings),
     )
 
@@ -132,10 +138,10 @@ class _Counter:
 
     def pieces(
         self, cells: Integers, shape_of: Integers, shares: Floats, shapes: NDArray[Any], progress: bool
-    ) -> tuple[Floats, float, float]:
-        """Return people of each (cell, shape) piece, pixels with a value covered, and pixels in all."""
+    ) -> tuple[Floats, Floats, Floats]:
+        """Return people of each (cell, shape) piece; pixels with a value, and in all, of each shape."""
         people = np.zeros(len(cells))
-        covered = whole = 0.0
+        covered, whole = np.zeros(len(shapes)), np.zeros(len(shapes))
         outlines = self.outlines(shapes)
         flat = self.grid.cell[cells]
         row, col = np.divmod(flat, self.grid.shape[1])
@@ -154,8 +160,9 @@ class _Counter:
                 some = cut_up[shape_of[group[cut_up]] == shape]
                 parts[some] = cut(outlines[shape], parts[some])
             people[group], pixels = self.population.people_in(parts)
-            covered += float(pixels.sum())
-            whole += float(shapely.area(parts).sum()) / pixel
+            covered += np.bincount(shape_of[group], weights=pixels, minlength=len(shapes))
+            area = shapely.area(parts) / pixel
+            whole += np.bincount(shape_of[group], weights=area, minlength=len(shapes))
         return people, covered, whole
 
 
@@ -180,6 +187,23 @@ def _coverage_findings(population: Population, covered: float, whole: float) -> 
     severity = "warning" if missing > POORLY_COVERED else "note"
     what = f"{population.path.name} has no value on {100.0 * missing:.2g} % of the region's land"
     return [Finding(None, None, "population", severity, what, "counted as nobody living there")]  # type: ignore[arg-type]
+
+
+def _unit_findings(grid: Grid, population: Population, known: Floats) -> list[Finding]:
+    names = np.asarray(grid.region.units["unit"], dtype=object)
+    findings = []
+    unknown = known < POORLY_KNOWN
+    if unknown.any():
+        what = f"{population.path.name} has (almost) no value in {listed(repr(n) for n in names[unknown])}"
+        action = "their population is taken as not known; they are weighted by area"
+        findings.append(Finding(None, None, "population", "warning", what, action))
+    partly = ~unknown & (known < PARTLY_KNOWN)
+    if partly.any():
+        shares = (f"{n!r} ({100.0 * k:.0f} %)" for n, k in zip(names[partly], known[partly], strict=True))
+        what = f"{population.path.name} has a value on part of the land only in {listed(shares)}"
+        action = "their population counts the people on that part"
+        findings.append(Finding(None, None, "population", "warning", what, action))
+    return findings
 
 
 def _on_excluded_land(grid: Grid, population: Population, counter: _Counter) -> float:

@@ -65,7 +65,9 @@ def site_findings(
     return keep, findings
 
 
-def assign_units(survey: Survey, region: Region) -> tuple[NDArray[np.int64], list[Finding]]:
+def assign_units(
+    survey: Survey, region: Region, keep: NDArray[np.bool_] | None = None
+) -> tuple[NDArray[np.int64], list[Finding]]:
     """Return the unit each accepted row of a survey lies in, by position, and the findings.
 
     A row outside every unit counts in the unit it declares where that is also the nearest unit (a school on
@@ -76,6 +78,8 @@ def assign_units(survey: Survey, region: Region) -> tuple[NDArray[np.int64], lis
     survey : Survey
         With n accepted rows.
     region : Region
+    keep : (n,) bool, optional
+        Rows near enough to the region (`site_findings`); the others are in no unit, without a finding.
 
     Returns
     -------
@@ -94,6 +98,8 @@ def assign_units(survey: Survey, region: Region) -> tuple[NDArray[np.int64], lis
     # Written in reverse order of units, so that the first of overlapping units stays.
     order = np.argsort(-inside, kind="stable")
     unit[which[order]] = inside[order]
+    kept = np.ones(len(frame), dtype=bool) if keep is None else keep
+    unit[~kept] = OUTSIDE
     if not survey.has_unit:
         return unit, []
     names = region.units["unit"].tolist()
@@ -102,7 +108,7 @@ def assign_units(survey: Survey, region: Region) -> tuple[NDArray[np.int64], lis
     sites = _texts(frame, "site")
     findings = []
     for place, text in enumerate(declared):
-        if not text:
+        if not text or not kept[place]:
             continue
         row = row_label(frame.index[place])
         here = names[unit[place]] if unit[place] >= 0 else None

@@ -263,7 +263,7 @@ def fit_model(
     frame = survey.frame[kept]
     accuracy = row_accuracy(survey, kept, model.tests)
     rows = pool_rows(frame, region.project(frame.geometry), designed.X[designed.kept], accuracy)
-    row_units, unit_findings = assign_units(survey, region)
+    row_units, unit_findings = assign_units(survey, region, inside)
     unplaced_units, unplaced_findings = assign_unplaced(survey, region)
 
     tick = _Progress(progress)

@@ -12,6 +12,7 @@ from scipy.sparse import csr_matrix
 
 from prevmap.errors import InputError
 from prevmap.inputs.grid import Grid
+from prevmap.inputs.people import POORLY_KNOWN
 from prevmap.model.direct import weighted_proportion, wilson_interval
 from prevmap.model.surface import Surface, check_threshold, joint_prevalence, predict_surface
 
@@ -32,7 +33,9 @@ class UnitEstimates:
         direct_estimate, direct_lower95, direct_upper95, mean, sd, lower95, median, upper95, population,
         infected_mean, infected_lower95, infected_upper95, nearest_site_km (mean over the unit's weight of the
         distance to the nearest site), share_extrapolated, basis, monte_carlo_error (standard error of
-        ``mean`` from the number of draws), then the region's other attributes.
+        ``mean`` from the number of draws), share_without_prediction (of the unit's weight, in cells where a
+        covariate is missing), weighting ("population", or "area" where nobody is counted), then the region's
+        other attributes.
     draw_matrix : (draws, n_units) float
         NaN for a unit without any prediction.
     weighting : {"population", "area"}
@@ -124,14 +127,26 @@ def estimate_units(fit: Fit, places: Grid | Surface, *, seed: int, draws: int, n
 
 def _weights(grid: Grid) -> tuple[csr_matrix, str]:
     """Weights (n_units, n_cells): people where known, else covered area; by area where nobody is counted."""
-    area = grid.pair_coverage
     weighting = "area" if grid.pair_people is None else "population"
-    value = area if grid.pair_people is None else grid.pair_people
+    people = np.zeros(grid.pair_unit.size) if grid.pair_people is None else grid.pair_people
+    value = np.where(_by_people(grid)[grid.pair_unit], people, grid.pair_coverage)
     shape = (len(grid.region.units), len(grid))
-    total = np.bincount(grid.pair_unit, weights=value, minlength=shape[0])
-    empty = total[grid.pair_unit] <= 0
-    value = np.where(empty, area, value)
     return csr_matrix((value, (grid.pair_unit, grid.pair_cell)), shape=shape), weighting
+
+
+def _known(grid: Grid) -> NDArray[np.bool_]:
+    """Which units (n_units,) have a population: the raster has a value on some of their land."""
+    if grid.pair_people is None or grid.people_known is None:
+        return np.zeros(len(grid.region.units), dtype=bool)
+    return grid.people_known >= POORLY_KNOWN
+
+
+def _by_people(grid: Grid) -> NDArray[np.bool_]:
+    """Which units (n_units,) are weighted by people: theirs are known, and there are some."""
+    if grid.pair_people is None:
+        return np.zeros(len(grid.region.units), dtype=bool)
+    total = np.bincount(grid.pair_unit, weights=grid.pair_people, minlength=len(grid.region.units))
+    return _known(grid) & (total > 0)
 
 
 def _draw_units(surface: Surface, draws: int, seed: int, weights: csr_matrix) -> NDArray[np.float64]:
@@ -175,9 +190,8 @@ def _raw_frame(fit: Fit, grid: Grid, surface: Surface, weights: csr_matrix) -> p
     for name in ("mean", "sd", "lower95", "median", "upper95"):
         frame[name] = np.nan
     people = grid.pair_people
-    frame["population"] = (
-        np.nan if people is None else np.bincount(grid.pair_unit, weights=people, minlength=count)
-    )
+    counted = np.nan if people is None else np.bincount(grid.pair_unit, weights=people, minlength=count)
+    frame["population"] = np.where(_known(grid), counted, np.nan)
     for name in ("infected_mean", "infected_lower95", "infected_upper95"):
         frame[name] = np.nan
     ones = np.ones(len(grid))
@@ -193,6 +207,8 @@ def _raw_frame(fit: Fit, grid: Grid, surface: Surface, weights: csr_matrix) -> p
         for u, name in enumerate(frame["unit"])
     ]
     frame["monte_carlo_error"] = np.nan
+    frame["share_without_prediction"] = (weights @ surface.missing.astype(float)) / total
+    frame["weighting"] = np.where(_by_people(grid), "population", "area")
     for name in units.columns:
         if name not in frame.columns and name != units.geometry.name:
             frame[name] = units[name].to_numpy()

@@ -23,6 +23,7 @@ UNDECIDED = "undecided"
 ABOVE = "above"
 BELOW = "below"
 
+_MOST_MISSING = 0.2  # share of a unit without a prediction, above which it is not decided
 _MOST_DRAWS = 64_000
 _MORE_DRAWS = 4
 _NEAR_ERRORS = 2.0
@@ -121,7 +122,9 @@ def classify_units(
     edges = checked_thresholds(thresholds)
     levels = checked_certainty(certainty)
     cutoffs = _class_cutoffs(len(edges) + 1, levels)
-    may_decide = _may_decide(units.frame, decide_without_sites)
+    barriers = _barriers(units.frame, decide_without_sites)
+    predicted = units.frame["mean"].notna().to_numpy(dtype=bool)
+    may_decide = predicted & np.array([barrier == "" for barrier in barriers])
 
     while True:
         probability, error = _class_probabilities(units, edges)
@@ -155,8 +158,7 @@ def classify_units(
             cutoffs,
             names,
             chosen,
-            basis=str(row["basis"]),
-            may_decide=bool(may_decide[i]),
+            barrier=barriers[i],
             on_edge=bool(near[i]),
             draws=units.draws,
         )
@@ -257,13 +259,21 @@ def _class_cutoffs(classes: int, levels: Mapping[str, float]) -> Array:
     return cutoffs
 
 
-def _may_decide(frame: pd.DataFrame, decide_without_sites: bool) -> NDArray[np.bool_]:
-    """Which units (n,) may be decided at all."""
-    predicted = frame["mean"].notna().to_numpy(dtype=bool)
-    if decide_without_sites:
-        return predicted
-    own: NDArray[np.bool_] = (frame["basis"] == "own sites").to_numpy(dtype=bool)
-    return predicted & own
+def _barriers(frame: pd.DataFrame, decide_without_sites: bool) -> list[str]:
+    """Why a unit may not be decided, whatever its probability; empty where it may."""
+    sites = frame["sites"].to_numpy(dtype=int)
+    own = (frame["basis"] == "own sites").to_numpy(dtype=bool)
+    missing = frame.get("share_without_prediction", pd.Series(0.0, index=frame.index)).to_numpy(dtype=float)
+    out = []
+    for i, basis in enumerate(frame["basis"]):
+        if not own[i] and not decide_without_sites:
+            place = "no surveyed site" if sites[i] == 0 else "no site with a position"
+            out.append(f"{place} in the unit (basis: {basis})")
+        elif missing[i] > _MOST_MISSING:
+            out.append(f"a covariate is missing on {100.0 * missing[i]:.0f} % of the unit")
+        else:
+            out.append("")
+    return out
 
 
 def _class_probabilities(units: UnitEstimates, edges: Sequence[float]) -> tuple[Array, Array]:
@@ -289,8 +299,7 @@ def _reason(
     names: Sequence[str],
     chosen: int | None,
     *,
-    basis: str,
-    may_decide: bool,
+    barrier: str,
     on_edge: bool,
     draws: int,
 ) -> str:
@@ -300,8 +309,8 @@ def _reason(
         return "no prediction for this unit"
     if chosen is not None:
         text = f"P({names[chosen]}) = {p[chosen]:.3f}, needed {cutoffs[chosen]:g}"
-    elif not may_decide:
-        return f"no surveyed site in the unit (basis: {basis}); P({names[leading]}) = {p[leading]:.3f}"
+    elif barrier:
+        return f"{barrier}; P({names[leading]}) = {p[leading]:.3f}"
     else:
         text = f"P({names[leading]}) = {p[leading]:.3f}, short of {cutoffs[leading]:g}"
     if on_edge:

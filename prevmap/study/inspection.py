@@ -84,7 +84,7 @@ def _inspected(study: Study, inputs: StudyInputs) -> Inspection:
     with naming(study, "[survey]"):
         if not near.any():
             raise InputError("no site lies in or near the study area: check the coordinates of both")
-    findings += assign_units(survey, region)[1] + assign_unplaced(survey, region)[1]
+    findings += assign_units(survey, region, near)[1] + assign_unplaced(survey, region)[1]
     frame = survey.frame[near]
     with naming(study, "[[covariate]]"):
         designed = design(model.covariates, frame, frame["site"])
