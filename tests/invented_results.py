@@ -267,6 +267,8 @@ def invented_results(seed=1, *, names=None, lake=True, population=True, cell_m=2
                 "share_extrapolated": float((far | odd)[mine].mean()),
                 "basis": "own sites" if len(own) else "neighbours",
                 "monte_carlo_error": drawn.std() / 20.0,
+                "share_without_prediction": 0.0,
+                "weighting": "population" if population else "area",
             }
         )
     frame = pd.DataFrame(rows)

@@ -12,9 +12,11 @@ import shapely
 from hypothesis import given
 from hypothesis import strategies as st
 from invented_results import NAMES, invented_results
-from matplotlib.collections import PathCollection
+from matplotlib.collections import LineCollection, PathCollection
 from matplotlib.colors import to_rgb
+from matplotlib.contour import ContourSet
 from matplotlib.figure import Figure
+from matplotlib.text import Text
 from tolerances import ALGEBRA
 
 import prevmap
@@ -27,7 +29,7 @@ from prevmap.show.maps import map_panel, map_sites, map_surface, map_units, surf
 from prevmap.show.outline import in_km, polygon_path
 from prevmap.show.palette import decision_styles, nice_ceiling, prevalence_norm
 from prevmap.show.scale_bar import bar_length_km
-from prevmap.show.sheet import open_sheet
+from prevmap.show.sheet import SHEET_WIDTH, open_sheet
 from prevmap.show.wording import wrapped
 
 
@@ -42,9 +44,7 @@ def decisions(results):
 
 
 def texts(ax):
-    return " ".join(
-        t.get_text().replace("\u00a0", " ") for t in ax.figure.findobj(lambda a: hasattr(a, "get_text"))
-    )
+    return " ".join(t.get_text().replace("\u00a0", " ") for t in ax.figure.findobj(Text))
 
 
 def image_of(ax):
@@ -214,6 +214,98 @@ def test_units_without_sites_are_hatched_and_counted(results):
     assert f"Hatched: {bare} of 12 units without a surveyed site" in words
 
 
+def with_frame(units, frame):
+    return SimpleNamespace(**{**vars(units), "frame": frame})
+
+
+def test_units_whose_sites_have_no_position_are_not_called_unsurveyed(results):
+    frame = results.units.frame.copy()
+    frame.loc[:3, "basis"] = "neighbours"
+    frame.loc[1:3, ["sites", "examined"]] = 0
+    bare = np.flatnonzero((frame["basis"] != "own sites") & (frame["sites"] == 0))
+    words = texts(map_units(with_frame(results.units, frame))).replace("\n", " ")
+    assert f"Hatched: {len(bare)} of 12 units without a surveyed site" in words
+    assert "Hatched: 1 of 12 units with no site with a usable position" in words
+
+
+def test_units_without_a_prediction_are_named_and_not_hatched(results):
+    frame = results.units.frame.copy()
+    frame.loc[:3, "basis"] = "covariates only"
+    frame.loc[:3, "sites"] = 0
+    bare = np.flatnonzero(frame["basis"] != "own sites")
+    frame.loc[bare[0], ["mean", "lower95", "upper95"]] = np.nan
+    ax = map_units(with_frame(results.units, frame))
+    words = texts(ax).replace("\n", " ")
+    assert f"No prediction, covariates missing: {frame['unit'][bare[0]]}." in words
+    assert f"Hatched: {len(bare) - 1} of 12 units" in words
+    assert "not mapped (no estimate, excluded area)" in words
+
+
+def test_units_weighted_by_area_or_predicted_in_part_are_named(results):
+    frame = results.units.frame.copy()
+    assert "Weighted by area" not in texts(map_units(results.units))
+    frame.loc[3, "weighting"] = "area"
+    frame.loc[4, "share_without_prediction"] = 0.25
+    words = texts(map_units(with_frame(results.units, frame))).replace("\n", " ")
+    assert f"Weighted by area, since the population file counts nobody: {NAMES[3]}." in words
+    assert f"{NAMES[4]} (25.0 %)." in words
+    older = results.units.frame.drop(columns=["weighting", "share_without_prediction"])
+    assert "Weighted by area" not in texts(map_units(with_frame(results.units, older)))
+
+
+@pytest.mark.parametrize(
+    "draw",
+    [
+        lambda r, **k: map_sites(r.fit, **k),
+        lambda r, **k: map_surface(r.surface, **k),
+        lambda r, **k: map_surface(r.surface, "uncertainty", **k),
+        lambda r, **k: map_surface(r.surface, "exceedance", 0.10, **k),
+    ],
+)
+def test_cell_maps_name_the_units_unless_told_not_to(results, draw):
+    signs = dict(zip(short_signs(results.region.units), NAMES, strict=True))
+
+    def labels(ax):
+        return [t.get_text() for t in ax.texts if t.get_text() in {*signs, *NAMES}]
+
+    ax = draw(results)
+    written = labels(ax)
+    # Every unit once, by name or by short sign, and every short sign explained under the map.
+    assert sorted(signs.get(label, label) for label in written) == sorted(NAMES)
+    words = texts(ax).replace("\n", " ")
+    assert all(f"{label} {signs[label]}" in words for label in written if label in signs)
+    assert labels(draw(results, labels=False)) == []
+
+
+def test_contours_of_certainty_are_told_from_borders(results):
+    ax = map_surface(results.surface, "exceedance", 0.10)
+    contours = [c for c in ax.collections if isinstance(c, ContourSet)]
+    assert [c.get_linestyle()[0][1] is None for c in contours] == [True, False]  # solid above, dashed below
+    borders = [c for c in ax.collections if type(c) is LineCollection and c.get_zorder() in (5, 5.2, 5.4)]
+    widest = max(float(np.max(c.get_linewidth())) for c in borders)
+    for contour in contours:
+        assert contour.get_path_effects()
+        assert float(np.max(contour.get_linewidth())) > 1.5 * widest
+        assert contour.get_zorder() > 5.4
+    legend = [t.get_text() for t in ax.get_legend().get_texts()]
+    assert legend[:4] == ["90 % sure: above", "90 % sure: below", "unit border", "border of several units"]
+
+
+def test_a_map_is_legible_on_a_phone(results, decisions):
+    for ax in (
+        map_sites(results.fit),
+        map_surface(results.surface, "exceedance", 0.10),
+        map_units(decisions, "decision"),
+        chart_units(decisions),
+        chart_sites(results.fit),
+        chart_odds_ratios(results.fit),
+    ):
+        # A phone shows a figure about 360 CSS pixels wide.
+        pixels_per_pt = 360.0 / (72.0 * ax.figure.get_size_inches()[0])
+        sizes = [t.get_fontsize() for t in ax.figure.findobj(Text) if t.get_text().strip()]
+        assert min(sizes) * pixels_per_pt > 10.3
+
+
 def test_a_unit_map_takes_values_by_name_not_by_position(results):
     shuffled = SimpleNamespace(
         **{**vars(results.units), "frame": results.units.frame.iloc[::-1].reset_index(drop=True)}
@@ -231,20 +323,20 @@ def test_names_are_taken_literally():
 
 @pytest.mark.parametrize("name", ["W", "A very long name of a unit"])
 def test_labels_never_overlap_and_short_signs_have_a_key(name):
-    # A hundred units on a sheet: long names cannot all fit.
+    # Sixty-four units on a sheet: long names cannot all fit.
     polygons = [
-        shapely.box(10 * (i % 10), 10 * (i // 10), 10 * (i % 10) + 10, 10 * (i // 10) + 10)
-        for i in range(100)
+        shapely.box(10 * (i % 8), 10 * (i // 8), 10 * (i % 8) + 10, 10 * (i // 8) + 10) for i in range(64)
     ]
-    sheet = open_sheet((0.0, 0.0, 100.0, 100.0))
+    sheet = open_sheet((0.0, 0.0, 80.0, 80.0))
     before = set(sheet.ax.texts)
     short = label_units(
-        sheet.ax, polygons, [UnitText(f"{name} {i}", str(i + 1)) for i in range(100)], sheet.km_per_pt
+        sheet.ax, polygons, [UnitText(f"{name} {i}", str(i + 1)) for i in range(64)], sheet.km_per_pt
     )
-    sheet.ax.set_position((0.05, 0.05, 0.78, 0.78 * 4.6 / 6.0 * sheet.box_in[1] / sheet.box_in[0]))
+    wide = sheet.box_in[0] / SHEET_WIDTH
+    sheet.ax.set_position((0.05, 0.05, wide, wide * SHEET_WIDTH / 6.0 * sheet.box_in[1] / sheet.box_in[0]))
     written = [t for t in sheet.ax.texts if t not in before]
-    assert len(written) == 100
-    assert len(short) == (0 if name == "W" else 100)
+    assert len(written) == 64
+    assert len(short) == (0 if name == "W" else 64)
     renderer = sheet.ax.figure.canvas.get_renderer()
     boxes = [shapely.box(*t.get_window_extent(renderer).extents) for t in written]
     tree = shapely.STRtree(boxes)

@@ -3,6 +3,7 @@
 import doctest
 import importlib
 import re
+from dataclasses import replace
 from html.parser import HTMLParser
 from types import SimpleNamespace
 
@@ -20,7 +21,7 @@ from prevmap.show.report import ReportContent, ReportFigure, render_report, repo
 from prevmap.show.report.checklist import checklist
 from prevmap.show.report.methods import cited_sources, methods_paragraphs
 from prevmap.show.report.summary import summary_sentences
-from prevmap.show.report.tables import finding_groups, unit_table, without_positions
+from prevmap.show.report.tables import finding_groups, rounded_positions, unit_table
 
 RECORD = {
     "inputs": {"survey.file": {"file": "sites.csv", "sha256": "ab" * 32}},
@@ -194,7 +195,7 @@ def test_findings_are_grouped_by_severity_and_cut_with_a_count(results):
 
 def test_exact_positions_are_not_passed_on():
     text = "(6.22941, -32.6371) is far from the others, around (-32.0421, 5.92444); (0, 0) stands for none"
-    assert without_positions(text) == (
+    assert rounded_positions(text) == (
         "(6.2, -32.6) is far from the others, around (-32.0, 5.9); (0, 0) stands for none"
     )
 
@@ -223,12 +224,11 @@ def test_the_unit_table_holds_every_unit_with_undecided_ones_first(results):
         p = row[column["P(above 10\u00a0%)"]].replace("\u00a0%", "")
         assert p in (f"{100 * exceedance[row[0]]:.1f}", "< 0.1", "> 99.9")
         if unit["mean"] >= 0.01:
-            assert row[column["modelled mean (95 % interval)"]].startswith(
-                f"{100 * unit['mean']:.1f}\u00a0% ("
-            )
+            assert row[column["modelled mean (95 %)"]].startswith(f"{100 * unit['mean']:.1f}\u00a0% (")
     assert table.marks == tuple(outcome)
+    assert table.heads[:3] == ("unit", "decision", "P(above 10\u00a0%)")
     unsurveyed = next(row for row in table.rows if row[column["sites"]] == "0")
-    assert unsurveyed[column["raw (95 % interval)"]] == "–"
+    assert unsurveyed[column["raw (95 %)"]] == "–"
 
 
 def test_coefficients_are_printed_as_odds_ratios_too(results):
@@ -249,6 +249,9 @@ def test_unfilled_items_of_the_checklist_say_so(results):
         content_of(results, statements={"funding": "An invented fund", "data_sources": "A survey"})
     )
     assert said[1].answer == "An invented fund"
+    stops = checklist(content_of(results, statements={"data_sources": "A survey.", "purpose": "To plan."}))
+    assert not [item.answer for item in [*items, *said, *stops] if ".." in item.answer]
+    assert stops[6].answer.endswith("Their origin: A survey.")
     assert {item.number for item in said if not item.stated} == {6, 8, 11, 12, 17}
     text = Page(render_report(content_of(results))).text
     assert text.count("not stated") >= 7
@@ -270,13 +273,30 @@ def test_methods_follow_what_was_done(results):
     table = results.fit.hyperparameters.copy()
     table.loc["nugget_sd"] = 0.0
     exact = SimpleNamespace(
-        **{**vars(results.fit), "engine": "exact", "hyperparameters": table, "diagnostics": {"components": 1}}
+        **{
+            **vars(results.fit),
+            "engine": "exact",
+            "hyperparameters": table,
+            "diagnostics": {"components": 1},
+            "prior_text": (
+                ("range_km", "range fixed at 30 km"),
+                ("sd", "P(sd of the field > 2) = 0.05"),
+                ("nugget_sd", "no nugget"),
+            ),
+        }
     )
     other = SimpleNamespace(**{**vars(results), "fit": exact})
     text = " ".join(methods_paragraphs(content_of(other, units=False)))
     assert "without a mesh" in text
     assert "the nugget" not in text
     assert "held at single values" in text
+    assert "The standard deviation of the surface has a penalised-complexity prior" in text
+    assert "the range of the surface (range fixed at 30 km) was given a value, not estimated" in text
+    every = (("range_km", "range fixed at 30 km"), ("sd", "sd of the field fixed at 1 on the logit scale"))
+    fixed = SimpleNamespace(**{**vars(exact), "prior_text": every})
+    paragraphs = methods_paragraphs(content_of(SimpleNamespace(**{**vars(results), "fit": fixed})))
+    assert "penalised" not in " ".join(paragraphs)
+    assert not any("Fuglstad" in reference for reference, _ in cited_sources(paragraphs))
     assert "Wilson" not in text
 
 
@@ -306,6 +326,64 @@ def test_several_thresholds_give_a_map_and_a_column_each(results):
     content = content_of(results, thresholds=(0.05, 0.20))
     assert {"P(above 5\u00a0%)", "P(above 20\u00a0%)"} <= set(unit_table(content).heads)
     assert "≥ 5 % and < 20 %" in Page(render_report(content)).text
+
+
+def test_an_undecided_class_tells_the_threshold_that_is_decided(results):
+    decisions = classify_units(results.units, [0.05, 0.10, 0.20])
+    frame = decisions.frame.copy()
+    frame["decision"], frame["basis"] = "undecided", "own sites"
+    classes = [f"p_class_{k}" for k in range(4)]
+    cases = {
+        (0.0, 0.0005, 0.45, 0.5495): "at least 10\u00a0%, class undecided",
+        (0.45, 0.50, 0.05, 0.0): "below 10\u00a0%, class undecided",
+        (0.02, 0.48, 0.48, 0.02): "at least 5\u00a0% and below 20\u00a0%, class undecided",
+        (0.09, 0.41, 0.42, 0.08): "below 20\u00a0%, class undecided",  # each sure, not both at once
+        (0.3, 0.2, 0.2, 0.3): "undecided",
+    }
+    for i, p in enumerate(cases):
+        frame.loc[i, classes] = p
+    content = replace(
+        content_of(results, thresholds=(0.05, 0.10, 0.20)), decisions=replace(decisions, frame=frame)
+    )
+    table = unit_table(content)
+    said = {row[0]: row[table.heads.index("decision")] for row in table.rows}
+    assert [said[frame["unit"][i]] for i in range(len(cases))] == list(cases.values())
+    assert set(table.marks) == {"undecided"}
+    # A unit without sites of its own is not decided, so nothing is said of its thresholds either.
+    frame.loc[0, "basis"] = "neighbours"
+    table = unit_table(content)
+    assert next(row[1] for row in table.rows if row[0] == frame["unit"][0]) == "undecided"
+
+
+def test_units_that_stand_on_less_are_named_under_the_table(results):
+    frame = results.units.frame.copy()
+    frame.loc[0, "basis"] = "neighbours"
+    frame.loc[1, ["mean", "lower95", "upper95"]] = np.nan
+    frame.loc[2, "weighting"] = "area"
+    frame.loc[4, "share_without_prediction"] = 0.125
+    units = SimpleNamespace(**{**vars(results.units), "frame": frame})
+    content = content_of(SimpleNamespace(**{**vars(results), "units": units}))
+    page = Page(render_report(content)).text
+    assert "1 of 12 units with no site with a usable position; the estimate comes from elsewhere." in page
+    assert f"1 unit has no prediction, since covariates are missing: {NAMES[1]}." in page
+    assert f"Weighted by area, since the population file counts nobody: {NAMES[2]}." in page
+    assert f"{NAMES[4]} (12.5 %)." in page
+    table = unit_table(content)
+    basis = {row[0]: row[table.heads.index("basis")] for row in table.rows}
+    assert basis[NAMES[0]] == "neighbours; no site with a usable position"
+    assert basis[NAMES[1]] == "no prediction: covariates missing"
+
+
+def test_the_units_chart_does_not_promise_narrower_intervals(full):
+    text = Page(full).text
+    assert "Raw intervals ignore clustering between sites, so they are too narrow" in text
+    assert "of the whole population of the unit" in text
+    assert "narrower" not in text
+
+
+def test_findings_carry_their_headings_for_narrow_screens(full):
+    cells = [attrs for attrs in Page(full).all("td") if "data-head" in attrs]
+    assert {attrs["data-head"] for attrs in cells} == {"site", "field", "what was found", "what was done"}
 
 
 def test_the_report_can_be_made_again_byte_for_byte(results, full):
@@ -392,3 +470,5 @@ def test_a_real_fit_without_a_region_becomes_a_report(real):
     assert list(figures) == ["sites", "sites_chart", "prevalence", "uncertainty", "exceedance"]
     assert "mapped cells" in page.text
     assert "no unit boundaries were given" in page.text
+    assert "weighted by area" not in page.text
+    assert "not given: no land is left blank" in page.text

@@ -31,11 +31,11 @@ def colour_bar(
     foot = STRIP_IN / height
     cax = sheet.ax.inset_axes((1.0 + _GAP_IN / width, foot, _WIDTH_IN / width, 1.0 - foot))
     bar = sheet.ax.figure.colorbar(mappable, cax=cax, extend=extend)
-    bar.set_label(label, fontsize=8.3, labelpad=3.0)
+    bar.set_label(label, fontsize=9.3, labelpad=3.0)
     if ticks is not None:
         cax.yaxis.set_major_locator(FixedLocator(list(ticks)))
     cax.yaxis.set_major_formatter(FuncFormatter(lambda value, _: show_tick(value)))
-    cax.tick_params(labelsize=8.0, length=2.5, pad=2.0)
+    cax.tick_params(labelsize=9.3, length=2.5, pad=2.0)
     cax.minorticks_off()
     for mark in marks:
         cax.axhline(mark, color=INK, linewidth=1.4)

@@ -20,12 +20,12 @@ _STYLE: dict[str, Any] = {
     "axes.facecolor": "white",
     "axes.grid": False,
     "axes.labelcolor": "#222222",
-    "axes.labelsize": 8.5,
+    "axes.labelsize": 9.3,
     "axes.linewidth": 0.7,
     "axes.titlesize": 11,
     "figure.facecolor": "white",
     "font.family": ["DejaVu Sans"],
-    "font.size": 8.5,
+    "font.size": 9.3,
     "hatch.linewidth": 0.7,
     "lines.linewidth": 1.2,
     "path.simplify": True,
@@ -36,9 +36,9 @@ _STYLE: dict[str, Any] = {
     "text.color": "#111111",
     "text.usetex": False,
     "xtick.color": "#222222",
-    "xtick.labelsize": 8,
+    "xtick.labelsize": 9.3,
     "ytick.color": "#222222",
-    "ytick.labelsize": 8,
+    "ytick.labelsize": 9.3,
 }
 
 _NO_DATE: dict[str, dict[str, Any]] = {

@@ -11,6 +11,7 @@ from matplotlib.ticker import FuncFormatter, MaxNLocator
 from prevmap.plan.classify import UNDECIDED, UnitDecisions, checked_thresholds
 from prevmap.show.canvas import house_style, new_figure, plain_text
 from prevmap.show.palette import BLUE, INK, ORANGE, SKY, decision_styles
+from prevmap.show.sheet import SHEET_WIDTH
 from prevmap.show.wording import count, inequality, threshold_text
 
 if TYPE_CHECKING:
@@ -19,7 +20,6 @@ if TYPE_CHECKING:
     from prevmap.model.fit import Fit
     from prevmap.model.units import UnitEstimates
 
-_WIDTH = 4.6
 _NAMED_UNITS = 80
 _TALLEST = 15.0
 _BIN_WIDTHS = (0.0005, 0.001, 0.002, 0.0025, 0.005, 0.01, 0.02, 0.025, 0.05)
@@ -59,7 +59,7 @@ def chart_sites(fit: Fit, threshold: float | None = None, ax: Axes | None = None
         ax.set_ylabel("sites")
         ax.xaxis.set_major_formatter(FuncFormatter(lambda v, _: f"{100 * v:.4g} %" if v >= 0 else ""))
         ax.yaxis.set_major_locator(MaxNLocator(integer=True))
-        ax.legend(frameon=False, fontsize=7.6, loc="upper right")
+        ax.legend(frameon=False, fontsize=9.3, loc="upper right")
         _tidy(ax, "Raw proportions of the sites")
     return ax
 
@@ -94,7 +94,7 @@ def chart_units(
     order = np.flatnonzero(predicted)[np.argsort(frame["mean"].to_numpy()[predicted], kind="stable")]
     named = len(order) <= _NAMED_UNITS
     with house_style():
-        ax = _axes(ax, min(1.3 + len(order) * (0.17 if named else 0.05), _TALLEST))
+        ax = _axes(ax, min(1.9 + len(order) * (0.18 if named else 0.05), _TALLEST))
         y = np.arange(len(order))
         shown = frame.iloc[order]
         direct = shown["direct_estimate"].to_numpy(dtype=float)
@@ -127,7 +127,7 @@ def chart_units(
         ax.set_xlim(left=0.0)
         ax.set_yticks(y if named else [])
         if named:
-            ax.set_yticklabels(shown["unit"].astype(str), fontsize=6.8)
+            ax.set_yticklabels(shown["unit"].astype(str), fontsize=9.0)
         ax.set_xlabel("prevalence")
         ax.xaxis.set_major_formatter(FuncFormatter(lambda v, _: f"{100 * v:.4g} %"))
         ax.grid(axis="x", color="#DDDDDD", linewidth=0.6)
@@ -136,9 +136,9 @@ def chart_units(
             ax.figure.legend(
                 handles=handles,
                 loc="outside lower left",
-                ncols=2,
+                ncols=1,
                 frameon=False,
-                fontsize=7.2,
+                fontsize=9.3,
                 columnspacing=1.2,
             )
         _tidy(ax, "Units: raw and modelled prevalence")
@@ -161,7 +161,7 @@ def chart_odds_ratios(fit: Fit, ax: Axes | None = None) -> Axes:
     """
     frame = fit.coefficients.drop(index="intercept", errors="ignore")
     with house_style():
-        ax = _axes(ax, 1.1 + 0.26 * len(frame))
+        ax = _axes(ax, 1.2 + 0.28 * len(frame))
         y = np.arange(len(frame))[::-1]
         ax.hlines(y, np.exp(frame["lower95"]), np.exp(frame["upper95"]), color=INK, linewidth=1.2)
         ax.scatter(np.exp(frame["median"]), y, s=26, c=BLUE, zorder=3)
@@ -227,7 +227,7 @@ def _threshold_line(ax: Any, edge: float, *, vertical: bool) -> None:
 def _axes(ax: Any, height_in: float) -> Any:
     if ax is not None:
         return ax
-    figure = new_figure(_WIDTH, height_in)
+    figure = new_figure(SHEET_WIDTH, height_in)
     figure.set_layout_engine("constrained")
     return figure.add_subplot()
 
@@ -235,5 +235,9 @@ def _axes(ax: Any, height_in: float) -> Any:
 def _tidy(ax: Any, title: str) -> None:
     for side in ("top", "right"):
         ax.spines[side].set_visible(False)
-    ax.set_title(title, loc="left", fontweight="bold")
+    if ax.figure.get_layout_engine() is None:
+        ax.set_title(title, loc="left", fontweight="bold")
+    else:
+        # From the left edge of the figure: beside long unit names the axes are too narrow for it.
+        ax.figure.suptitle(title, x=0.015, ha="left", fontsize=11, fontweight="bold")
     plain_text(ax.figure)

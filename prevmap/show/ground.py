@@ -13,7 +13,7 @@ from shapely.geometry import shape
 
 from prevmap.show.outline import Bounds, draw_lines, fill, hatch, in_km
 from prevmap.show.palette import BLANK, INK, LINE, PREVALENCE
-from prevmap.show.sheet import MapSheet, swatch
+from prevmap.show.sheet import MapSheet, line_entry, swatch
 
 HATCH_PT = 5.5
 
@@ -78,6 +78,14 @@ def draw_borders(sheet: MapSheet, ground: Ground) -> None:
     if len(ground.parents) > 1:
         draw_lines(sheet.ax, [thin(g, sheet) for g in ground.parents], colour=INK, width=1.1, zorder=5.2)
     draw_lines(sheet.ax, [thin(ground.boundary, sheet)], colour=INK, width=0.8, zorder=5.4)
+
+
+def border_entries(ground: Ground) -> list[Any]:
+    """Legend entries of the borders that are drawn, where they have to be told apart from other lines."""
+    entries = [line_entry("unit border", "solid", width=0.5, colour=LINE)] if ground.units else []
+    if len(ground.parents) > 1:
+        entries.append(line_entry("border of several units", "solid", width=1.1))
+    return entries
 
 
 def draw_sites(sheet: MapSheet, sites: Any, norm: Any, *, sized: bool = False) -> Any:

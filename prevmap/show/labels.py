@@ -11,10 +11,12 @@ import shapely
 from matplotlib.patheffects import withStroke
 from shapely.ops import polylabel
 
+from prevmap.show.outline import in_km
 from prevmap.show.palette import INK
+from prevmap.show.sheet import MapSheet
 
-NAME_PT = 6.8
-LETTER_PT = 9.5
+NAME_PT = 8.8
+LETTER_PT = 11.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,6 +92,40 @@ def label_units(
         if _place(ax, text.short, spots, polygon, taken, km_per_pt, share=0.5):
             shortened.append(i)
     return [texts[i] for i in sorted(shortened)]
+
+
+def write_labels(
+    sheet: MapSheet, region: Any, shapes: Sequence[Any], letters: Sequence[str] = ()
+) -> list[str]:
+    """Label the units of a map and return the key of short labels as a note; nothing without units.
+
+    Parameters
+    ----------
+    sheet : MapSheet
+        The map.
+    region : Region
+        Its units bring names and codes; labels keep to the land that is not excluded.
+    shapes : sequence of shapely geometry (n,), km
+        The units as drawn.
+    letters : sequence of str (n,), optional
+        Class letters to write with the names.
+
+    Returns
+    -------
+    list of str
+        One sentence, or none where no label had to be shortened.
+    """
+    if not len(shapes):
+        return []
+    frame = region.units
+    given = letters or [""] * len(shapes)
+    texts = [
+        UnitText(str(name), sign, letter)
+        for name, sign, letter in zip(frame["unit"], short_signs(frame), given, strict=True)
+    ]
+    land = shapes if region.exclude is None else [g.difference(in_km(region.exclude)) for g in shapes]
+    key = label_key(label_units(sheet.ax, land, texts, sheet.km_per_pt))
+    return [f"Short labels: {key}."] if key else []
 
 
 def label_key(shortened: Sequence[UnitText]) -> str:

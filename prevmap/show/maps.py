@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from matplotlib.cm import ScalarMappable
 from matplotlib.colors import Normalize
+from matplotlib.patheffects import withStroke
 from numpy.typing import NDArray
 
 from prevmap.errors import InputError
@@ -17,6 +18,7 @@ from prevmap.show.canvas import Sheet, house_style, new_figure
 from prevmap.show.ground import (
     Ground,
     blank_entry,
+    border_entries,
     cells_polygon,
     draw_borders,
     draw_ground,
@@ -25,6 +27,7 @@ from prevmap.show.ground import (
     read_ground,
     thin,
 )
+from prevmap.show.labels import write_labels
 from prevmap.show.outline import polygon_path
 from prevmap.show.palette import (
     BLANK,
@@ -56,6 +59,7 @@ if TYPE_CHECKING:
     from prevmap.model.fit import Fit
     from prevmap.model.surface import Surface
 
+_CONTOUR_PT = 1.9
 _SHOWS = ("prevalence", "uncertainty", "exceedance")
 
 
@@ -67,6 +71,7 @@ def map_surface(
     *,
     sites: bool = False,
     certainty: float | Mapping[str, float] = 0.90,
+    labels: bool = True,
 ) -> Axes:
     """Map a predicted surface.
 
@@ -85,6 +90,8 @@ def map_surface(
         Draw raw site proportions over a prevalence map, on the same colour scale.
     certainty : float or mapping
         Probability marked on an exceedance map, in colour bar and by contour lines.
+    labels : bool
+        Write unit names where they fit, else codes (or numbers) with a key under the map.
 
     Returns
     -------
@@ -97,7 +104,7 @@ def map_surface(
         If ``show`` is unknown or the threshold is missing or not a share.
     """
     with house_style():
-        sheet = draw_surface(surface, show, threshold, ax, sites=sites, certainty=certainty)
+        sheet = draw_surface(surface, show, threshold, ax, sites=sites, certainty=certainty, labels=labels)
         if sheet.own:
             arrange_sheets(sheet.ax.figure, [sheet], 1)
     return sheet.ax
@@ -109,6 +116,7 @@ def map_sites(
     ax: Axes | None = None,
     *,
     surface: Surface | None = None,
+    labels: bool = True,
 ) -> Axes:
     """Map raw site proportions: what was measured, before any model.
 
@@ -122,6 +130,8 @@ def map_sites(
         Axes to draw on; a new figure without one.
     surface : Surface, optional
         Colours as on the prevalence map of this surface, so that the two can be compared.
+    labels : bool
+        Write unit names where they fit, else codes (or numbers) with a key under the map.
 
     Returns
     -------
@@ -130,14 +140,18 @@ def map_sites(
     """
     norm = _shared_norm(surface) if surface is not None else None
     with house_style():
-        sheet = draw_site_map(survey_or_fit, region, ax, norm=norm)
+        sheet = draw_site_map(survey_or_fit, region, ax, norm=norm, labels=labels)
         if sheet.own:
             arrange_sheets(sheet.ax.figure, [sheet], 1)
     return sheet.ax
 
 
 def map_panel(
-    surface: Surface, threshold: float | None = None, certainty: float | Mapping[str, float] = 0.90
+    surface: Surface,
+    threshold: float | None = None,
+    certainty: float | Mapping[str, float] = 0.90,
+    *,
+    labels: bool = True,
 ) -> Sheet:
     """Draw sites, prevalence, uncertainty and exceedance side by side, on one extent.
 
@@ -149,6 +163,8 @@ def map_panel(
         Without it there is no exceedance map.
     certainty : float or mapping
         Probability marked on the exceedance map.
+    labels : bool
+        Write unit names where they fit, else codes (or numbers) with a key under the map.
 
     Returns
     -------
@@ -158,11 +174,14 @@ def map_panel(
         figure = new_figure(9.2, 12.0)
         norm = _shared_norm(surface)
         source = getattr(surface, "fit", surface)
-        sheets = [draw_site_map(source, surface.region, figure=figure, norm=norm)]
+        sheets = [draw_site_map(source, surface.region, figure=figure, norm=norm, labels=labels)]
         shows = ["prevalence", "uncertainty", *(["exceedance"] if threshold is not None else [])]
         for show in shows:
             given = threshold if show == "exceedance" else None
-            sheets.append(draw_surface(surface, show, given, figure=figure, norm=norm, certainty=certainty))
+            drawn = draw_surface(
+                surface, show, given, figure=figure, norm=norm, certainty=certainty, labels=labels
+            )
+            sheets.append(drawn)
         arrange_sheets(figure, sheets, 2)
     return figure
 
@@ -178,6 +197,7 @@ def draw_surface(
     certainty: float | Mapping[str, float] = 0.90,
     norm: Normalize | None = None,
     exceedance: NDArray[np.float64] | None = None,
+    labels: bool = True,
 ) -> MapSheet:
     """Draw one map of a surface and return its sheet, not yet arranged in the figure.
 
@@ -214,6 +234,7 @@ def draw_surface(
     _paint(sheet, surface, ground, shown, mappable)
     if show == "exceedance":
         handles += _certainty_contours(sheet, surface, ground, shown, levels)
+        handles += border_entries(ground)
     extrapolated = np.asarray(surface.extrapolated, dtype=bool) & ~hidden
     if extrapolated.any():
         _mark_extrapolated(sheet, surface, ground, extrapolated)
@@ -224,6 +245,8 @@ def draw_surface(
         draw_sites(sheet, surface.sites, mappable.norm)
         handles.append(site_entry("raw proportion of a site"))
         notes += _above_scale(surface.sites, mappable.norm)
+    if labels:
+        notes += _unit_labels(sheet, surface.region, ground)
     reasons = blank_reasons(surface, ground)
     if reasons:
         handles.append(blank_entry(reasons))
@@ -243,6 +266,7 @@ def draw_site_map(
     *,
     figure: Any = None,
     norm: Normalize | None = None,
+    labels: bool = True,
 ) -> MapSheet:
     """Draw the map of raw site proportions and return its sheet, not yet arranged in the figure."""
     sites, area = _placed_sites(source, region)
@@ -257,11 +281,12 @@ def draw_site_map(
         handles.append(swatch("study area", BLANK))
     norm = norm or prevalence_norm(top, top)
     markers = draw_sites(sheet, sites, norm, sized=True)
-    prevalence_bar(sheet, markers, "positive of those examined, raw", sites["proportion"])
+    prevalence_bar(sheet, markers, "raw proportion positive", sites["proportion"])
     examined, positive = int(sites["examined"].sum()), int(sites["positive"].sum())
     smallest, largest = int(sites["examined"].min()), int(sites["examined"].max())
     span = f"{smallest:,}" if smallest == largest else f"{smallest:,} to {largest:,}"
     handles.insert(0, site_entry(f"site, area by number examined ({span})"))
+    key = _unit_labels(sheet, area, ground) if labels and ground is not None else []
     names = sites["site"].nunique() if "site" in sites else len(sites)
     return close_sheet(
         sheet,
@@ -271,6 +296,7 @@ def draw_site_map(
         notes=[
             f"{count(names, 'site')}, {examined:,} examined, {positive:,} positive.",
             *_above_scale(sites, norm),
+            *key,
         ],
     )
 
@@ -389,12 +415,18 @@ def _certainty_contours(
         if not raster.min() < level < raster.max():
             continue
         lines = sheet.ax.contour(
-            x, y, raster, levels=[level], colors=INK, linewidths=1.0, linestyles=style, zorder=4
+            x, y, raster, levels=[level], colors=INK, linewidths=_CONTOUR_PT, linestyles=style, zorder=5.8
         )
+        # The white edge tells a contour from a border, in a grey print too.
+        lines.set_path_effects([withStroke(linewidth=_CONTOUR_PT + 2.4, foreground="white")])
         if path is not None:
             lines.set_clip_path(path, sheet.ax.transData)
-        entries.append(line_entry(words, style))
+        entries.append(line_entry(words, style, width=_CONTOUR_PT))
     return entries
+
+
+def _unit_labels(sheet: MapSheet, region: Any, ground: Ground) -> list[str]:
+    return write_labels(sheet, region, [thin(geometry, sheet) for geometry in ground.units])
 
 
 def _placed_sites(source: Any, region: Any) -> tuple[Any, Any]:

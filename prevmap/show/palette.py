@@ -16,11 +16,9 @@ INK = "#111111"
 # Okabe & Ito (2008), told apart with any form of colour blindness.
 ORANGE = "#E69F00"
 SKY = "#56B4E9"
-GREEN = "#009E73"
 YELLOW = "#F0E442"
 BLUE = "#0072B2"
 VERMILLION = "#D55E00"
-PURPLE = "#CC79A7"
 
 # Light is low and dark is high in all of them, so that a grey print keeps the order.
 PREVALENCE: Colormap = colormaps["viridis_r"]

@@ -41,6 +41,10 @@ def draw_scale_bar(ax: Any, left_km: float, bottom_km: float, width_km: float, h
         )
     )
     above = bottom_km + 1.5 * height_km
-    for offset, text in ((0.0, "0"), (half, f"{half:g}"), (length, f"{length:g} km")):
-        ax.text(left_km + offset, above, text, ha="center", va="bottom", fontsize=7.8)
+    ticks = [(0.0, "0"), (length, f"{length:g} km")]
+    # The bar is four points high; its middle is labelled where the numbers stand clear of each other.
+    if half > 7.0 * height_km:
+        ticks.insert(1, (half, f"{half:g}"))
+    for offset, text in ticks:
+        ax.text(left_km + offset, above, text, ha="center", va="bottom", fontsize=9.0)
     return length

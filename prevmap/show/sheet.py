@@ -16,15 +16,15 @@ from prevmap.show.palette import INK
 from prevmap.show.scale_bar import draw_scale_bar
 from prevmap.show.wording import wrapped
 
-# Sizes in inches, chosen so that 8 pt text is readable on a phone that shows one sheet across its width.
-_WIDTH = 4.6
-_MAP_WIDTH = 3.6
-_MAP_HEIGHT = 4.2
+# Sizes in inches: a phone shows one sheet 360 CSS pixels wide, so that 9.3 pt text is 11 pixels high there.
+SHEET_WIDTH = 4.2
+_MAP_WIDTH = 3.12
+_MAP_HEIGHT = 4.0
 _LEFT = 0.1
 STRIP_IN = 0.42
-_TITLE_PT = 10.5
-_SUBTITLE_PT = 8.2
-_NOTE_PT = 7.7
+_TITLE_PT = 11.0
+_SUBTITLE_PT = 9.3
+_NOTE_PT = 9.3
 _LEADING = 1.32
 
 
@@ -63,7 +63,7 @@ def open_sheet(bounds: Bounds, ax: Any = None, figure: Any = None) -> MapSheet:
     km_per_inch = max((east - west) / _MAP_WIDTH, (north - south) / _MAP_HEIGHT)
     own = ax is None
     if own:
-        figure = new_figure(_WIDTH, 6.0) if figure is None else figure
+        figure = new_figure(SHEET_WIDTH, 6.0) if figure is None else figure
         ax = figure.add_axes((0.02, 0.2, 0.8, 0.7))
     else:
         ax.apply_aspect()
@@ -95,7 +95,7 @@ def close_sheet(
 ) -> MapSheet:
     """Write head, legend and notes; arrange the figure where it is ours and holds this sheet only."""
     ax = sheet.ax
-    width = _WIDTH - 2 * _LEFT if sheet.own else sheet.box_in[0]
+    width = SHEET_WIDTH - 2 * _LEFT if sheet.own else sheet.box_in[0]
     below = wrapped(subtitle, width, _SUBTITLE_PT) if subtitle else []
     # Two lines at least, so that the heads of neighbouring sheets stand level.
     below += [" "] * (2 - len(below)) if sheet.own else []
@@ -110,7 +110,7 @@ def close_sheet(
     depth = 5.0
     if handles:
         longest = max(len(handle.get_label()) for handle in handles)
-        columns = max(1, min(len(handles), int(width * 72.0 / (26.0 + 0.55 * _NOTE_PT * longest))))
+        columns = max(1, min(len(handles), int(width * 72.0 / (32.0 + 0.55 * _NOTE_PT * longest))))
         shift = ScaledTranslation(0.0, -depth / 72.0, ax.figure.dpi_scale_trans)
         ax.legend(
             handles=list(handles),
@@ -122,8 +122,8 @@ def close_sheet(
             borderpad=0.0,
             borderaxespad=0.0,
             labelspacing=0.45,
-            columnspacing=1.4,
-            handlelength=1.8,
+            columnspacing=1.2,
+            handlelength=2.2,
             fontsize=_NOTE_PT,
         )
         depth += 1.62 * _NOTE_PT * -(-len(handles) // columns) + 2.0
@@ -143,12 +143,12 @@ def arrange_sheets(figure: Any, sheets: Sequence[MapSheet], columns: int) -> Non
         (_largest(row, "head_in"), max(s.box_in[1] for s in row), _largest(row, "foot_in")) for row in rows
     ]
     total = sum(sum(parts) for parts in heights)
-    wide = _WIDTH * min(columns, len(sheets))
+    wide = SHEET_WIDTH * min(columns, len(sheets))
     figure.set_size_inches(wide, total)
     top = total
     for row, (head, box, foot) in zip(rows, heights, strict=True):
         for place, sheet in enumerate(row):
-            left = _LEFT + place * _WIDTH
+            left = _LEFT + place * SHEET_WIDTH
             bottom = top - head - sheet.box_in[1]
             sheet.ax.set_position(
                 (left / wide, bottom / total, sheet.box_in[0] / wide, sheet.box_in[1] / total)
@@ -162,9 +162,9 @@ def swatch(label: str, colour: str, *, pattern: str = "", edge: str = "#555555")
     return Patch(facecolor=colour, edgecolor=edge, linewidth=0.5, hatch=marks, label=label)
 
 
-def line_entry(label: str, style: str) -> Line2D:
+def line_entry(label: str, style: str, *, width: float = 1.1, colour: str = INK) -> Line2D:
     """Legend entry of a line drawn on the map."""
-    return Line2D([], [], color=INK, linewidth=1.1, linestyle=style, label=label)
+    return Line2D([], [], color=colour, linewidth=width, linestyle=style, label=label)
 
 
 def site_entry(label: str, size: float = 5.0) -> Line2D:

@@ -13,6 +13,7 @@ from matplotlib.colors import Normalize
 from prevmap.errors import InputError
 from prevmap.plan.classify import UnitDecisions, checked_certainty, checked_thresholds
 from prevmap.show.bars import exceedance_bar, prevalence_bar, uncertainty_bar
+from prevmap.show.basis import unit_basis, weight_notes
 from prevmap.show.canvas import house_style
 from prevmap.show.ground import (
     HATCH_PT,
@@ -23,7 +24,7 @@ from prevmap.show.ground import (
     read_ground,
     thin,
 )
-from prevmap.show.labels import UnitText, label_key, label_units, short_signs
+from prevmap.show.labels import write_labels
 from prevmap.show.outline import dots, fill, hatch, in_km
 from prevmap.show.palette import (
     BLANK,
@@ -37,7 +38,7 @@ from prevmap.show.palette import (
     prevalence_norm,
 )
 from prevmap.show.sheet import MapSheet, arrange_sheets, close_sheet, open_sheet, swatch
-from prevmap.show.wording import count, inequality, listed, meaning, sentence, threshold_text
+from prevmap.show.wording import inequality, listed, meaning, sentence, threshold_text
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -163,16 +164,9 @@ def draw_unit_map(
     reasons = [*(["no estimate"] if blank else []), *(["excluded area"] if ground.water else [])]
     if reasons:
         handles.append(blank_entry(reasons))
+    notes += weight_notes(units.frame)
     if labels:
-        texts = _unit_texts(units.region.units, letters)
-        land = (
-            [geometry.difference(in_km(units.region.exclude)) for geometry in shapes]
-            if ground.water
-            else shapes
-        )
-        key = label_key(label_units(sheet.ax, land, texts, sheet.km_per_pt))
-        if key:
-            notes.append(f"Short labels: {key}.")
+        notes += write_labels(sheet, units.region, shapes, letters)
     return close_sheet(sheet, title=title, subtitle=_subtitle(units), handles=handles, notes=notes)
 
 
@@ -226,17 +220,15 @@ def _paint_decisions(sheet: MapSheet, decisions: UnitDecisions, shapes: list[Any
 def _mark_guessed(
     sheet: MapSheet, units: Any, shapes: list[Any], place: Any, handles: list[Any]
 ) -> list[str]:
-    """Hatch units without a site of their own: their estimate is borrowed."""
-    own = (units.frame["basis"] == "own sites").to_numpy()[place]
-    for shape, surveyed in zip(shapes, own, strict=True):
-        if not surveyed:
+    """Hatch units whose estimate is borrowed from elsewhere; say which, and which have none."""
+    basis = unit_basis(units.frame)
+    for shape, borrowed in zip(shapes, basis.borrowed[place], strict=True):
+        if borrowed:
             hatch_area(sheet, shape)
-    missing = int(np.count_nonzero(~own))
-    total = count(len(own), "unit")
-    if not missing:
-        return [f"{total}, each with surveyed sites of its own."]
-    handles.append(swatch("no surveyed site in the unit", "#FFFFFF", pattern="lines"))
-    return [f"Hatched: {missing:,} of {total} without a surveyed site; the estimate comes from elsewhere."]
+    if basis.borrowed.any():
+        lack = "no surveyed site" if basis.bare.any() else "no site with a usable position"
+        handles.append(swatch(f"{lack} in the unit", "#FFFFFF", pattern="lines"))
+    return basis.sentences(hatched=True)
 
 
 def _decision_words(decisions: UnitDecisions) -> tuple[str, list[str]]:
@@ -269,14 +261,6 @@ def _rows_by_unit(units: Any) -> Any:
     """Position in ``units.frame`` of each row of ``region.units``."""
     row_of = {name: i for i, name in enumerate(units.frame["unit"])}
     return np.array([row_of[name] for name in units.region.units["unit"]], dtype=int)
-
-
-def _unit_texts(frame: Any, letters: list[str]) -> list[UnitText]:
-    signs = short_signs(frame)
-    return [
-        UnitText(str(name), sign, letter)
-        for name, sign, letter in zip(frame["unit"], signs, letters, strict=True)
-    ]
 
 
 def _subtitle(units: Any) -> str:

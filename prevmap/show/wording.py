@@ -149,9 +149,17 @@ def file_name(path: object) -> str:
     return str(path).replace("\\", "/").rsplit("/", 1)[-1]
 
 
-def sentence(text: str) -> str:
-    """Start a clause with a capital and end it with a full stop."""
-    return text[:1].upper() + text[1:] + ("." if text and not text.endswith(".") else "")
+def sentence(text: str, *, capital: bool = True) -> str:
+    """End a clause with one full stop (none after another end of a sentence) and start it with a capital.
+
+    Examples
+    --------
+    >>> sentence("two words"), sentence("said before.", capital=False), sentence("why?")
+    ('Two words.', 'said before.', 'Why?')
+    """
+    text = text.rstrip()
+    first = text[:1].upper() if capital else text[:1]
+    return first + text[1:] + ("." if text and not text.endswith((".", "!", "?")) else "")
 
 
 def wrapped(text: str, width_in: float, size_pt: float) -> list[str]:

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 
 from prevmap.show.report.methods import integrated
 from prevmap.show.report.summary import rows_sentence
-from prevmap.show.wording import NOT_STATED, count, file_name, listed, noted
+from prevmap.show.wording import NOT_STATED, count, file_name, listed, noted, sentence
 
 if TYPE_CHECKING:
     from prevmap.show.report.content import ReportContent
@@ -95,7 +95,7 @@ def _what(content: ReportContent) -> str:
     )
     text = f"Prevalence of: {indicator}; ages: {ages}; date: {date}; place: {where}."
     purpose = content.statements.get("purpose")
-    return f"{text} Purpose: {purpose}" if purpose else text
+    return f"{text} Purpose: {sentence(str(purpose), capital=False)}" if purpose else text
 
 
 def _inclusion(content: ReportContent) -> str:
@@ -116,7 +116,7 @@ def _other_inputs(content: ReportContent) -> str:
     if population is not None:
         parts.append(f"population: {file_name(population.path)}")
     files = "; ".join(parts) or "none"
-    return f"{files}. Their origin: {_said(content.statements, 'data_sources')}."
+    return f"{files}. Their origin: {sentence(_said(content.statements, 'data_sources'), capital=False)}"
 
 
 def _uncertainty(content: ReportContent) -> str:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from prevmap.show.basis import unit_basis
 from prevmap.show.canvas import figure_bytes, house_style
 from prevmap.show.charts import chart_odds_ratios, chart_sites, chart_units
 from prevmap.show.maps import draw_surface, map_sites, map_surface, surface_notes
@@ -109,8 +110,8 @@ def _surface_figures(
             f"{low} to {high}. "
             f"{hatched}",
             f"Probability that prevalence is above {threshold_text(threshold)}. Pale yellow "
-            "means that it cannot "
-            "be told; lines mark where the probability reaches the certainty asked for.",
+            "means that it cannot be told; thick lines with a white edge mark where the probability "
+            "reaches the certainty asked for.",
         )
     return drawn
 
@@ -119,8 +120,7 @@ def _unit_figures(
     units: Any, decisions: Any, thresholds: Sequence[float], certainty: float | Mapping[str, float]
 ) -> dict[str, ReportFigure]:
     frame = units.frame
-    borrowed = int((frame["basis"] != "own sites").sum())
-    hatched = f"{count(borrowed, 'unit')} without a surveyed site {'is' if borrowed == 1 else 'are'} hatched."
+    hatched = " ".join(unit_basis(frame).sentences(hatched=True))
     width = (frame["upper95"] - frame["lower95"]).to_numpy(dtype=float)
     drawn = {
         "unit_prevalence": _figure(
@@ -159,9 +159,9 @@ def _unit_figures(
         "Chart of every unit's raw estimate and modelled mean, each with its 95 % interval; the "
         "unit table holds "
         "the same numbers.",
-        "Raw and modelled prevalence of each unit. The model borrows strength from neighbours, "
-        "so its intervals "
-        "are mostly narrower and its means less extreme than the raw estimates.",
+        "Raw and modelled prevalence of each unit. Raw intervals ignore clustering between sites, so they "
+        "are too narrow. The raw estimate is of the people examined at the surveyed sites, the modelled "
+        "mean of the whole population of the unit.",
     )
     return drawn
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Any
 
-from prevmap.show.wording import NUGGET_WORDS, listed
+from prevmap.show.wording import NUGGET_WORDS, listed, sentence
 
 if TYPE_CHECKING:
     from prevmap.show.report.content import ReportContent
@@ -135,11 +135,31 @@ def _computation(fit: Any) -> str:
         )
     else:
         text += "The hyperparameters were held at single values, which intervals do not account for. "
-    return text + (
-        "Range and standard deviation of the surface have penalised-complexity priors (Fuglstad "
-        "et al. 2019), "
-        "printed above as they were used."
-    )
+    return text + _priors(fit)
+
+
+_PARAMETERS = (
+    ("range_km", "the range of the surface"),
+    ("sd", "the standard deviation of the surface"),
+    ("nugget_sd", "the standard deviation of the nugget"),
+)
+
+
+def _priors(fit: Any) -> str:
+    """Say which hyperparameters have priors and which were fixed; what the model lacks is not named."""
+    sentences = dict(fit.prior_text)
+    known = [(words, str(sentences[name])) for name, words in _PARAMETERS if name in sentences]
+    free = [words for words, prior in known if prior.startswith("P(")]
+    fixed = [f"{words} ({prior})" for words, prior in known if " fixed at " in prior]
+    parts = []
+    if free:
+        parts.append(
+            f"{listed(free)} {'has a' if len(free) == 1 else 'have'} penalised-complexity "
+            f"prior{'' if len(free) == 1 else 's'} (Fuglstad et al. 2019), printed above as used"
+        )
+    if fixed:
+        parts.append(f"{listed(fixed)} {'was' if len(fixed) == 1 else 'were'} given a value, not estimated")
+    return sentence("; ".join(parts))
 
 
 def _prediction(content: ReportContent) -> str:

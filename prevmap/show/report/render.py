@@ -11,6 +11,7 @@ from typing import Any
 import jinja2
 
 from prevmap.plan.classify import UNDECIDED
+from prevmap.show.basis import unit_basis, weight_notes
 from prevmap.show.maps import surface_notes
 from prevmap.show.palette import decision_styles
 from prevmap.show.report.checklist import checklist
@@ -104,6 +105,7 @@ def _context(content: ReportContent) -> dict[str, Any]:
         "maps": [("By place", of_cells), ("By unit", of_units)],
         "map_notes": surface_notes(content.surface),
         "units": unit_table(content),
+        "unit_notes": _unit_notes(content),
         "class_colours": _class_colours(content),
         "decided": content.decisions is not None,
         "weighted": "weight" in content.survey.frame.columns,
@@ -116,6 +118,16 @@ def _context(content: ReportContent) -> dict[str, Any]:
         "command": content.record.get("command", "prevmap run study.toml"),
         "settings_file": content.record.get("study", ""),
     }
+
+
+def _unit_notes(content: ReportContent) -> list[str]:
+    """Name the units whose estimate stands on less than the others'."""
+    if content.units is None:
+        return []
+    frame = content.units.frame
+    basis = unit_basis(frame)
+    lacking = bool((basis.borrowed | basis.unpredicted).any())
+    return [*(basis.sentences() if lacking else []), *weight_notes(frame)]
 
 
 def _picture(figure: ReportFigure) -> dict[str, Any]:

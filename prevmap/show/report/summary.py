@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from prevmap.plan.classify import ABOVE, BELOW, UNDECIDED, checked_certainty
+from prevmap.show.basis import unit_basis
 from prevmap.show.wording import (
     NOT_STATED,
     count,
@@ -88,7 +89,7 @@ def survey_facts(content: ReportContent) -> list[tuple[str, str]]:
     else:
         facts.append(("Study area", "buffered outline of the sites; no unit boundaries were given"))
     population: Any = getattr(content.surface.grid, "population", None)
-    facts.append(("Population", _population_words(population)))
+    facts.append(("Population", _population_words(population, region.has_units)))
     facts.append(("Largest distortion of distances on the map", percent(float(region.distortion))))
     return facts
 
@@ -128,11 +129,23 @@ def _decided(content: ReportContent) -> list[str]:
         sentences.append(
             f"Of the {decided:,} decided, about {wrong} can be expected to be wrong if the model holds."
         )
-    bare = int(((decisions.frame["decision"] == UNDECIDED) & (decisions.frame["basis"] != "own sites")).sum())
-    if bare:
+    undecided = (decisions.frame["decision"] == UNDECIDED).to_numpy(dtype=bool)
+    basis = unit_basis(decisions.units.frame)
+    for mask, lack in (
+        (basis.bare, "no surveyed site"),
+        (basis.unplaced, "no site with a usable position"),
+    ):
+        number = int((undecided & mask).sum())
+        if number:
+            sentences.append(
+                f"{count(number, 'undecided unit')} {_have(number)} {lack}; "
+                "the probability shown for such a unit is borrowed from elsewhere."
+            )
+    number = int(basis.unpredicted.sum())
+    if number:
         sentences.append(
-            f"{count(bare, 'undecided unit')} {_have(bare)} no surveyed site; "
-            "the probability shown for such a unit is borrowed from elsewhere."
+            f"{count(number, 'unit')} {_have(number)} no prediction, since covariates are missing: "
+            f"{basis.named(basis.unpredicted)}."
         )
     return sentences
 
@@ -157,9 +170,10 @@ def _cells(content: ReportContent) -> list[str]:
     return sentences
 
 
-def _population_words(population: Any) -> str:
+def _population_words(population: Any, has_units: bool) -> str:
     if population is None:
-        return "not given: units are weighted by area, and no land is left blank for being empty"
+        weighted = "units are weighted by area, and " if has_units else ""
+        return f"not given: {weighted}no land is left blank for being empty"
     name = file_name(population.path)
     ages = "–".join(f"{age:g}" for age in population.ages) if population.ages else NOT_STATED
     year = str(population.year) if population.year else NOT_STATED

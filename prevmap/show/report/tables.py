@@ -11,11 +11,13 @@ from typing import TYPE_CHECKING, Any
 import pandas as pd
 
 from prevmap.plan.classify import ABOVE, BELOW, UNDECIDED
+from prevmap.show.basis import unit_basis
 from prevmap.show.labels import short_signs
 from prevmap.show.palette import decision_styles
 from prevmap.show.wording import inequality, percent, probability, significant, threshold_text
 
 if TYPE_CHECKING:
+    from prevmap.plan.classify import UnitDecisions
     from prevmap.show.report.content import ReportContent
 
 _SEVERITIES = (
@@ -60,12 +62,12 @@ class FindingGroup:
     more: int
 
 
-def without_positions(text: str) -> str:
+def rounded_positions(text: str) -> str:
     """Round pairs of coordinates to one decimal: the report is passed on, exact site positions are not.
 
     Examples
     --------
-    >>> without_positions("(-32.04213, 5.92444) is far from the other sites")
+    >>> rounded_positions("(-32.04213, 5.92444) is far from the other sites")
     '(-32.0, 5.9) is far from the other sites'
     """
     return _POSITION.sub(lambda pair: f"({float(pair[1]):.1f}, {float(pair[2]):.1f})", text)
@@ -83,8 +85,8 @@ def finding_groups(findings: pd.DataFrame) -> list[FindingGroup]:
                 _cell(f.row),
                 _cell(f.site),
                 _cell(f.field),
-                without_positions(_cell(f.what)),
-                without_positions(_cell(f.action)),
+                rounded_positions(_cell(f.what)),
+                rounded_positions(_cell(f.action)),
             )
             for f in mine.head(_MOST_ROWS).itertuples()
         )
@@ -149,6 +151,7 @@ def unit_table(content: ReportContent) -> Table | None:
         decisions.frame["decision"].astype(str).to_list() if decisions is not None else [""] * len(frame)
     )
     order = _unit_order(frame, outcome)
+    basis = unit_basis(frame)
     parents = "parent" in frame and frame["parent"].notna().any()
     people = "population" in frame and frame["population"].notna().any()
     infected = "infected_mean" in frame and frame["infected_mean"].notna().any()
@@ -156,29 +159,24 @@ def unit_table(content: ReportContent) -> Table | None:
         t: content.units.exceedance(t).loc[frame["unit"].to_list()].to_list() for t in content.thresholds
     }
 
-    heads = [
-        "unit",
-        "label",
-        *(["part of"] if parents else []),
-        "sites",
-        "examined",
-        "positive",
-        "raw (95 % interval)",
-    ]
-    heads += ["modelled mean (95 % interval)", *(f"P(above {threshold_text(t)})" for t in content.thresholds)]
-    heads += [*(["decision"] if decisions is not None else []), "basis"]
-    heads += [*(["people"] if people else []), *(["infected (95 % interval)"] if infected else [])]
+    # What a reader looks for first stands beside the name: on a phone the rest has to be scrolled to.
+    heads = ["unit", *(["decision"] if decisions is not None else [])]
+    heads += [f"P(above {threshold_text(t)})" for t in content.thresholds]
+    heads += ["modelled mean (95 %)", "label", *(["part of"] if parents else [])]
+    heads += ["sites", "examined", "positive", "raw (95 %)", "basis"]
+    heads += [*(["people"] if people else []), *(["infected (95 %)"] if infected else [])]
     left = {"unit", "label", "part of", "decision", "basis"}
     signs = short_signs(content.region.units)
     rows = []
     for i in order:
         unit = frame.iloc[i]
-        cells = [_cell(unit["unit"]), signs[i], *([_cell(unit["parent"])] if parents else [])]
+        cells = [_cell(unit["unit"]), *([_decision(decisions, i)] if decisions is not None else [])]
+        cells += [probability(float(above[t][i])) for t in content.thresholds]
+        cells.append(_interval(unit, "mean", "lower95", "upper95"))
+        cells += [signs[i], *([_cell(unit["parent"])] if parents else [])]
         cells += [_whole(unit["sites"]), _whole(unit["examined"]), _whole(unit["positive"])]
         cells.append(_interval(unit, "direct_estimate", "direct_lower95", "direct_upper95"))
-        cells.append(_interval(unit, "mean", "lower95", "upper95"))
-        cells += [probability(float(above[t][i])) for t in content.thresholds]
-        cells += [*([inequality(outcome[i])] if decisions is not None else []), _cell(unit["basis"])]
+        cells.append(basis.of(i, _cell(unit["basis"])))
         cells += [_whole(unit["population"])] if people else []
         if infected:
             low, high = _whole(unit["infected_lower95"]), _whole(unit["infected_upper95"])
@@ -193,6 +191,29 @@ def unit_table(content: ReportContent) -> Table | None:
             for i in order
         )
     return Table(tuple(heads), tuple(rows), numeric, marks)
+
+
+def _decision(decisions: UnitDecisions, i: int) -> str:
+    """Print the decision of one unit; undecided between classes, with the thresholds that are decided."""
+    row = decisions.frame.iloc[i]
+    outcome = str(row["decision"])
+    edges = decisions.thresholds
+    if outcome != UNDECIDED or len(edges) == 1 or row["basis"] != "own sites":
+        return inequality(outcome)
+    p = [float(row[f"p_class_{k}"]) for k in range(len(edges) + 1)]
+    levels = decisions.certainty
+    # The highest threshold that prevalence is surely above, and the lowest that it is surely below.
+    lower = [k for k in range(len(edges)) if sum(p[k + 1 :]) >= levels[ABOVE]]
+    upper = [k for k in range(len(edges)) if sum(p[: k + 1]) >= levels[BELOW]]
+    if lower and upper and sum(p[lower[-1] + 1 : upper[0] + 1]) < max(levels.values()):
+        # Each is sure alone but not both at once: only the surer one is said.
+        if sum(p[lower[-1] + 1 :]) >= sum(p[: upper[0] + 1]):
+            upper = []
+        else:
+            lower = []
+    said = [f"at least {threshold_text(edges[lower[-1]])}"] if lower else []
+    said += [f"below {threshold_text(edges[upper[0]])}"] if upper else []
+    return f"{' and '.join(said)}, class undecided" if said else UNDECIDED
 
 
 def input_table(inputs: Mapping[str, Any]) -> Table:
