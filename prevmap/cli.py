@@ -6,16 +6,16 @@ Exit codes: 0 done; 1 (verify only) a number differs; 2 the input is wrong; 3 th
 
 from __future__ import annotations
 
-import argparse
-import logging
-import signal
 import sys
-from collections.abc import Callable, Sequence
-from pathlib import Path
-from typing import NoReturn
+from typing import TYPE_CHECKING, NoReturn
 
 from prevmap import __version__
 from prevmap.errors import FitError, InputError
+
+if TYPE_CHECKING:
+    import argparse
+    from collections.abc import Callable, Sequence
+    from pathlib import Path
 
 DONE, DIFFERS, WRONG_INPUT, NOT_FITTED, INTERRUPTED = 0, 1, 2, 3, 130
 
@@ -28,21 +28,32 @@ def main(arguments: Sequence[str] | None = None) -> int:
     arguments : sequence of str, optional
         Default: the arguments of the process.
     """
-    options = _parser().parse_args(arguments)
-    logging.basicConfig(level=logging.WARNING, format="%(levelname)s: %(message)s", stream=sys.stderr)
-    previous = signal.signal(signal.SIGTERM, _interrupt)  # so that a stopped run tidies up as well
-    command: Callable[[argparse.Namespace], int] = options.command
     try:
-        return command(options)
+        return _obey(arguments)
     except InputError as error:
         print(f"prevmap: {error}", file=sys.stderr)
         return WRONG_INPUT
     except FitError as error:
         print(f"prevmap: the model could not be fitted: {error}", file=sys.stderr)
         return NOT_FITTED
+    except OSError as error:  # a file that may not be read, a disk that is full
+        print(f"prevmap: {error}", file=sys.stderr)
+        return WRONG_INPUT
     except KeyboardInterrupt:
         print("prevmap: interrupted; earlier results are as they were", file=sys.stderr)
         return INTERRUPTED
+
+
+def _obey(arguments: Sequence[str] | None) -> int:
+    import logging  # modules load inside main's try, so that an interruption meanwhile is told in words
+    import signal
+
+    options = _parser().parse_args(arguments)
+    logging.basicConfig(level=logging.WARNING, format="%(levelname)s: %(message)s", stream=sys.stderr)
+    previous = signal.signal(signal.SIGTERM, _interrupt)  # so that a stopped run tidies up as well
+    command: Callable[[argparse.Namespace], int] = options.command
+    try:
+        return command(options)
     finally:
         signal.signal(signal.SIGTERM, previous)
 
@@ -51,7 +62,19 @@ def _interrupt(_number: int, _frame: object) -> NoReturn:
     raise KeyboardInterrupt
 
 
+def _folder(text: str) -> Path:
+    import argparse
+    from pathlib import Path
+
+    if not text.strip():
+        raise argparse.ArgumentTypeError(f'found "{text}"; accepted: the path of a folder')
+    return Path(text)
+
+
 def _parser() -> argparse.ArgumentParser:
+    import argparse
+    from pathlib import Path
+
     parser = argparse.ArgumentParser(
         prog="prevmap",
         description="From a disease survey to a prevalence map, exceedance probabilities and unit decisions.",
@@ -63,7 +86,7 @@ def _parser() -> argparse.ArgumentParser:
     run = commands.add_parser("run", help="run a study file to its report and tables")
     run.add_argument("study", type=Path, metavar="STUDY", help="the study file (TOML)")
     run.add_argument(
-        "--output", type=Path, metavar="DIR", help="folder for the results, not the study file's"
+        "--output", type=_folder, metavar="DIR", help="folder for the results, not the study file's"
     )
     run.add_argument("--quiet", action="store_true", help="print no progress")
     run.set_defaults(command=_run)
@@ -74,7 +97,7 @@ def _parser() -> argparse.ArgumentParser:
     inspect.set_defaults(command=_inspect)
 
     demo = commands.add_parser("demo", help="copy the demo study into a folder and run it")
-    demo.add_argument("folder", type=Path, metavar="FOLDER", help="a new or empty folder")
+    demo.add_argument("folder", type=_folder, metavar="FOLDER", help="a new or empty folder")
     demo.add_argument("--quiet", action="store_true", help="print no progress")
     demo.set_defaults(command=_demo)
 
@@ -101,16 +124,22 @@ def _run(options: argparse.Namespace) -> int:
     return DONE
 
 
+def _tell(line: object) -> None:
+    from prevmap.study.progress import say
+
+    say(str(line), sys.stdout)
+
+
 def _print_results(folder: Path) -> None:
-    print(f"Report:  {folder / 'share' / 'report.html'}")
-    print(f"To pass on (no exact site positions): {folder / 'share'}")
-    print(f"To keep (exact site positions):       {folder / 'internal'}")
+    _tell(f"Report:  {folder / 'share' / 'report.html'}")
+    _tell(f"To pass on (no exact site positions): {folder / 'share'}")
+    _tell(f"To keep (exact site positions):       {folder / 'internal'}")
 
 
 def _inspect(options: argparse.Namespace) -> int:
     from prevmap.study import read_study
 
-    print(read_study(options.study).inspect(progress=not options.quiet))
+    _tell(read_study(options.study).inspect(progress=not options.quiet))
     return DONE
 
 
@@ -120,7 +149,7 @@ def _demo(options: argparse.Namespace) -> int:
 
     study = copy_demo(options.folder)
     result = read_study(study).run(progress=not options.quiet)
-    print(f"The demo study (an invented province) is in {study.parent}.")
+    _tell(f"The demo study (an invented province) is in {study.parent}.")
     _print_results(result.folder)
     return DONE
 
@@ -130,11 +159,11 @@ def _verify(options: argparse.Namespace) -> int:
 
     found = verify_record(options.record, progress=not options.quiet, tolerance=options.tolerance)
     for difference in found.environment:
-        print(f"other environment: {difference}")
+        _tell(f"other environment: {difference}")
     for difference in found.differences:
-        print(f"differs: {difference}")
+        _tell(f"differs: {difference}")
     rule = "exactly" if found.tolerance == 0 else f"within a relative {found.tolerance:g}"
-    print(f"{found.compared} numbers compared {rule}: {len(found.differences)} differences.")
+    _tell(f"{found.compared} numbers compared {rule}: {len(found.differences)} differences.")
     return DIFFERS if found.differences else DONE
 
 

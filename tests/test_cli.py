@@ -65,6 +65,7 @@ def test_a_missing_file_is_wrong_input(command, tmp_path, capsys):
             3,
             "prevmap: the model could not be fitted: no mode; try a prior",
         ),
+        (OSError(28, "No space left on device"), 2, "prevmap: [Errno 28] No space left on device"),
         (KeyboardInterrupt(), 130, "prevmap: interrupted"),
     ],
 )
@@ -94,6 +95,52 @@ def test_python_dash_m(study_file):
     )
     assert done.returncode == 2
     assert done.stderr == 'prevmap: study.toml: unknown section "surveys"; did you mean "survey"?\n'
+
+
+@pytest.mark.parametrize("arguments", [["run", "study.toml", "--output", " "], ["demo", ""]])
+def test_an_empty_folder_name_is_refused(arguments, capsys):
+    with pytest.raises(SystemExit) as done:
+        main(arguments)
+    assert done.value.code == 2
+    assert '"; accepted: the path of a folder' in capsys.readouterr().err
+
+
+def test_an_empty_output_is_refused_from_python(study_file):
+    with pytest.raises(prevmap.InputError, match='output: found ""; accepted: the path of a folder'):
+        prevmap.read_study(study_file).run(output="")
+
+
+def test_an_interruption_while_modules_load_is_told_in_words():
+    script = """
+import sys
+class Interrupting:
+    def find_spec(self, name, path=None, target=None):
+        if name == "argparse":
+            raise KeyboardInterrupt
+from prevmap.cli import main
+sys.meta_path.insert(0, Interrupting())
+sys.exit(main(["--version"]))
+"""
+    done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, check=False)
+    assert done.returncode == 130
+    assert done.stderr == "prevmap: interrupted; earlier results are as they were\n"
+
+
+def test_a_reader_that_goes_away_changes_no_exit_code():
+    script = """
+import os, sys
+from pathlib import Path
+from prevmap import cli
+from prevmap.study.progress import Stages
+read, write = os.pipe()
+os.close(read)
+os.dup2(write, 1)
+os.dup2(write, 2)
+with Stages(1, True).stage("survey", "Reading the survey"):
+    cli._print_results(Path("results"))
+sys.exit(1)
+"""
+    assert subprocess.run([sys.executable, "-c", script], check=False).returncode == 1
 
 
 def test_output_and_quiet_reach_the_run(study_file, monkeypatch, tmp_path):

@@ -9,6 +9,7 @@ import signal
 import subprocess
 import sys
 import time
+from types import SimpleNamespace
 from typing import get_args
 
 import geopandas
@@ -25,9 +26,11 @@ import prevmap
 from prevmap.cli import main
 from prevmap.inputs.covariates import TRANSFORMS
 from prevmap.inputs.findings import Finding, findings_frame
+from prevmap.study.outputs import check_output
 from prevmap.study.settings import Transform
 from prevmap.study.sharing import coarse_positions, shareable_fit, shared_square_m, without_positions
 from prevmap.study.verification import verify_record
+from prevmap.study.writing import unit_table
 
 STUDY = """schema = 1
 [survey]
@@ -169,12 +172,30 @@ def test_the_unit_table_has_estimates_attributes_and_decisions(study):
     np.testing.assert_allclose(layer["mean"], table["mean"], rtol=1e-15)
 
 
+def test_attributes_of_the_region_replace_no_column_of_the_model(again):
+    names = ["decision", "Reason", "p_class_1", "exceedance_0.05", "decision_monte_carlo_error"]
+    plain = again.unit_table
+    given = again.units.frame.assign(**{name: "of the region" for name in names})
+    given = given.assign(decision_in_region="taken")
+    units = SimpleNamespace(
+        frame=given, exceedance=again.units.exceedance, exceedance_error=again.units.exceedance_error
+    )
+    table = unit_table(units, again.decisions, again.thresholds)
+    pd.testing.assert_frame_equal(table[plain.columns], plain)
+    for name in names[1:]:
+        assert set(table[f"{name}_in_region"]) == {"of the region"}
+    assert set(table["decision_in_region"]) == {"taken"}
+    assert set(table["decision_in_region_in_region"]) == {"of the region"}
+    assert len({name.casefold() for name in table.columns}) == len(table.columns)
+
+
 def test_what_is_kept_has_every_site_and_every_finding(study):
     sites = pd.read_csv(study / "results" / "internal" / "sites_checked.csv")
     given = pd.read_csv(study / "sites.csv")
     assert sites["row"].tolist() == list(range(2, 26))
     np.testing.assert_allclose(sites["longitude"], given["lon"][:24], rtol=1e-12)
-    findings = pd.read_csv(study / "results" / "internal" / "findings.csv")
+    findings = pd.read_csv(study / "results" / "internal" / "findings.csv", dtype={"row": "Int64"})
+    assert ".0," not in (study / "results" / "internal" / "findings.csv").read_text()
     assert findings.columns.tolist() == ["row", "site", "field", "severity", "what", "action"]
     assert {26, 27} <= set(findings.loc[findings["severity"] == "error", "row"])
 
@@ -399,18 +420,17 @@ def test_a_killed_run_leaves_the_earlier_results(study, number):
     before = files(study / "results")
     command = [sys.executable, "-m", "prevmap", "run", str(study / "study.toml"), "--quiet"]
     process = subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
-    while process.poll() is None and not list(study.glob(".results.partial-*/share/figures/*.png")):
+    while process.poll() is None and not list(study.glob("results/.partial-*/new/share/figures/*.png")):
         time.sleep(0.02)
     assert process.poll() is None, "the run ended before it could be killed"
     process.send_signal(number)
     _, errors = process.communicate()
-    left = list(study.glob(".results.partial-*"))
+    left = list(study.glob("results/.partial-*"))
     if number == signal.SIGINT:
         assert process.returncode == 130
         assert errors == "prevmap: interrupted; earlier results are as they were\n"
         assert left == []
-    for folder in left:
-        shutil.rmtree(folder)
+    check_output(study / "results", {})  # as the next run begins
     assert files(study / "results") == before
 
 

@@ -15,6 +15,7 @@ from prevmap.inputs.attributes import attribute
 from prevmap.inputs.covariates import ColumnCovariate, DistanceCovariate, FactorCovariate, RasterCovariate
 from prevmap.inputs.findings import findings_frame
 from prevmap.inputs.grid import Grid
+from prevmap.inputs.placement import exchange_hint
 from prevmap.inputs.population import Population, read_population
 from prevmap.inputs.region import Region, hull_region, read_region
 from prevmap.inputs.survey import Survey, SurveyNotes, read_survey
@@ -24,9 +25,10 @@ from prevmap.model.surface import Surface
 from prevmap.model.units import UnitEstimates
 from prevmap.plan.classify import UnitDecisions, classify_units
 from prevmap.study.checks import TailPrior
-from prevmap.study.outputs import check_output, replacing
+from prevmap.study.outputs import check_output
 from prevmap.study.progress import Stages, kept_warnings
 from prevmap.study.record import input_hashes
+from prevmap.study.replacement import replacing
 from prevmap.study.schema import Study
 from prevmap.study.settings import CovariateSettings
 from prevmap.study.writing import unit_table, write_results
@@ -122,7 +124,15 @@ def read_inputs(study: Study, stages: Stages) -> StudyInputs:
             with naming(study, "[population]"):
                 population = _read_population(study, region)
         with naming(study, "[grid]"):
-            grid = region.grid(study.grid.cell_km, cells=study.grid.cells, population=population)
+            try:
+                grid = region.grid(study.grid.cell_km, cells=study.grid.cells, population=population)
+            except InputError as error:
+                # A population that misses the region is told first, though the region may be at fault.
+                hint = exchange_hint(survey.frame, region, 0.0)
+                if not hint:
+                    raise
+                text = f"{error} No site lies in the region either.{hint}"
+                raise InputError(text, error.findings) from error
     covariates = tuple(_covariate(settings) for settings in study.covariates)
     return StudyInputs(survey, region, population, covariates, grid)
 

@@ -1,27 +1,25 @@
-"""The output folder: written beside its place and moved there whole; safe cells; no exact positions."""
+"""The output folder: refused before any work where it cannot hold results; safe cells; stable bytes."""
 
 from __future__ import annotations
 
 import contextlib
 import hashlib
-import os
-import shutil
 import sqlite3
 import tempfile
-from collections.abc import Iterator
 from pathlib import Path
 
 import pandas as pd
 
 from prevmap.errors import InputError
+from prevmap.study.replacement import PARTS, RECORD, clear_abandoned, recorded_outputs
 
-PARTS = ("share", "internal")
-_RECORD = Path("internal") / "record.json"
 _FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 
 
 def check_output(folder: Path, inputs: dict[str, Path]) -> None:
     """Refuse an output folder that results may not be moved into, before any work is done.
+
+    What a killed run left in the folder is removed, so that it is not taken for anything else.
 
     Parameters
     ----------
@@ -33,22 +31,11 @@ def check_output(folder: Path, inputs: dict[str, Path]) -> None:
     Raises
     ------
     InputError
-        The folder is a file, may not be written to, holds a share or internal folder from elsewhere, or
+        The folder is a file, cannot be written to, holds a share or internal folder from elsewhere, or
         holds an input file where results would go.
     """
     if folder.exists() and not folder.is_dir():
         raise InputError(f"output folder {folder}: found a file; accepted: a folder or a new name")
-    standing = next(parent for parent in (folder, *folder.parents) if parent.exists())
-    if not standing.is_dir() or not os.access(standing, os.W_OK):
-        raise InputError(
-            f"output folder {folder}: {standing} may not be written to; accepted: a folder of your own"
-        )
-    held = [part for part in PARTS if (folder / part).exists()]
-    if held and not (folder / _RECORD).is_file():
-        raise InputError(
-            f'output folder {folder}: found "{held[0]}" in it, but no {_RECORD.as_posix()} of an earlier '
-            "run, so it will not be replaced; accepted: a new folder, or the folder of an earlier run"
-        )
     for key, path in inputs.items():
         for part in PARTS:
             if path.is_relative_to((folder / part).resolve()):
@@ -56,45 +43,27 @@ def check_output(folder: Path, inputs: dict[str, Path]) -> None:
                     f'{key}: {path} lies in the output folder\'s "{part}", which a run replaces; accepted: '
                     "another output folder, or the input kept elsewhere"
                 )
+    _probe(folder)
+    clear_abandoned(folder)
+    held = [part for part in PARTS if (folder / part).exists()]
+    if held and recorded_outputs(folder) is None:
+        raise InputError(
+            f'output folder {folder}: found "{held[0]}" in it, but no {RECORD.as_posix()} of an earlier '
+            "run, so it will not be replaced; accepted: a new folder, or the folder of an earlier run"
+        )
 
 
-@contextlib.contextmanager
-def replacing(folder: Path) -> Iterator[Path]:
-    """Yield an empty folder beside `folder`; move its parts into `folder` when the block ends well.
-
-    Whatever ends the block otherwise, an interruption included, leaves `folder` as it was and removes the
-    new folder. Files of the user's own in `folder` stay.
-    """
+def _probe(folder: Path) -> None:
+    """Make a folder with a file where results would be made, as permissions alone do not tell."""
+    standing = next(parent for parent in (folder, *folder.parents) if parent.exists())
     try:
-        folder.parent.mkdir(parents=True, exist_ok=True)
-        fresh = Path(tempfile.mkdtemp(prefix=f".{folder.name}.partial-", dir=folder.parent))
+        with tempfile.TemporaryDirectory(prefix=".probe-", dir=standing) as probe:
+            (Path(probe) / "file").write_bytes(bytes(4096))
     except OSError as error:
-        raise InputError(f"output folder {folder}: it cannot be made: {error.strerror}") from error
-    try:
-        yield fresh
-        _move_parts(fresh, folder)
-    finally:
-        shutil.rmtree(fresh, ignore_errors=True)
-
-
-def _move_parts(fresh: Path, folder: Path) -> None:
-    """Swap the new parts in; put the old ones back should any rename fail."""
-    folder.mkdir(exist_ok=True)
-    retired = fresh / "retired"
-    retired.mkdir()
-    done: list[str] = []
-    try:
-        for part in PARTS:
-            if (folder / part).exists():
-                (folder / part).rename(retired / part)
-            done.append(part)
-            (fresh / part).rename(folder / part)
-    except BaseException:
-        for part in done:
-            if (retired / part).exists():
-                shutil.rmtree(folder / part, ignore_errors=True)
-                (retired / part).rename(folder / part)
-        raise
+        raise InputError(
+            f"output folder {folder}: {standing} may not be written to ({error.strerror}); accepted: a "
+            "folder of your own with room for the results"
+        ) from error
 
 
 def neutral(cell: object) -> object:
@@ -115,7 +84,8 @@ def write_csv(frame: pd.DataFrame, path: Path) -> None:
     safe = frame.copy()
     for name in safe.columns:
         if not pd.api.types.is_numeric_dtype(safe[name]):
-            safe[name] = safe[name].map(neutral)
+            # As objects: whole numbers beside missing ones would else become 10.0.
+            safe[name] = pd.Series([neutral(cell) for cell in safe[name]], index=safe.index, dtype=object)
     safe.columns = [neutral(str(name)) for name in safe.columns]
     safe.to_csv(path, index=False, lineterminator="\n", encoding="utf-8")
 

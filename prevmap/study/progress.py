@@ -4,9 +4,19 @@ from __future__ import annotations
 
 import contextlib
 import logging
+import os
 import sys
 import time
 from collections.abc import Iterator
+from typing import TextIO
+
+
+def say(line: str, stream: TextIO) -> None:
+    """Print a line; where its reader has gone (``| head``), fall silent without stopping the work."""
+    try:
+        print(line, file=stream, flush=True)
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), stream.fileno())
 
 
 class Stages:
@@ -48,7 +58,7 @@ class Stages:
 
     def _say(self, line: str) -> None:
         if self.shown:
-            print(line, file=sys.stderr, flush=True)
+            say(line, sys.stderr)
 
 
 class KeptWarnings(logging.Handler):

@@ -85,6 +85,8 @@ class Study:
         FitError
             The model could not be fitted; nothing was written.
         """
+        if output is not None and not str(output).strip():
+            raise InputError(f"output: found {checks.shown(str(output))}; accepted: the path of a folder")
         from prevmap.study.chain import run_study  # reading a study file must not wait for numba
 
         return run_study(self, progress=progress, output=None if output is None else Path(output))

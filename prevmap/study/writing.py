@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sqlite3
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, replace
 from pathlib import Path
@@ -9,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 import geopandas
 import pandas as pd
+from pyogrio.errors import DataSourceError
 
 from prevmap.inputs.survey import Survey
 from prevmap.model.fit import Fit
@@ -24,6 +26,8 @@ from prevmap.study.sharing import shareable_fit, shared_square_m
 
 if TYPE_CHECKING:
     from prevmap.study.chain import StudyResult
+
+_IN_BOTH = ("unit", "code", "parent", "sites", "basis")  # columns of the estimates and of the decisions
 
 
 def unit_table(
@@ -41,17 +45,25 @@ def unit_table(
     Returns
     -------
     DataFrame
-        One row per unit, in the order of the region.
+        One row per unit, in the order of the region. An attribute of the region that has the name of a
+        column added here is renamed to ``<name>_in_region``.
     """
     table = pd.DataFrame(units.frame.drop(columns="geometry", errors="ignore")).reset_index(drop=True)
+    added: dict[str, Any] = {}
     for threshold in thresholds:
         for column in (units.exceedance(threshold), units.exceedance_error(threshold)):
-            table[column.name] = column.to_numpy()
+            added[str(column.name)] = column.to_numpy()
     if decisions is not None:
-        decided = decisions.frame.reset_index(drop=True)
+        decided = decisions.frame.drop(columns=list(_IN_BOTH))
         decided = decided.rename(columns={"monte_carlo_error": "decision_monte_carlo_error"})
-        table = pd.concat([table, decided.drop(columns=[c for c in decided if c in table])], axis=1)
-    return table
+        added |= {name: decided[name].to_numpy() for name in decided.columns}
+    reserved = {name.casefold() for name in added}  # a GeoPackage does not tell the cases apart
+    for name in [name for name in table.columns if str(name).casefold() in reserved]:
+        free = f"{name}_in_region"
+        while free in table.columns:
+            free += "_in_region"
+        table = table.rename(columns={name: free})
+    return table.assign(**added)
 
 
 def write_unit_layer(table: pd.DataFrame, units: UnitEstimates, path: Path) -> None:
@@ -62,8 +74,11 @@ def write_unit_layer(table: pd.DataFrame, units: UnitEstimates, path: Path) -> N
     for name in layer.columns.drop("geometry"):
         if layer[name].dtype == object:
             layer[name] = layer[name].map(lambda cell: None if pd.isna(cell) else str(cell))
-    layer.to_file(path, layer="units", driver="GPKG", engine="pyogrio")
-    settle_geopackage(path)
+    try:
+        layer.to_file(path, layer="units", driver="GPKG", engine="pyogrio")
+        settle_geopackage(path)
+    except (DataSourceError, sqlite3.Error) as error:  # a full disk, which these do not name as such
+        raise OSError(f"{path.name}: {error}") from error
 
 
 def checked_sites(survey: Survey) -> pd.DataFrame:
