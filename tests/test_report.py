@@ -224,11 +224,11 @@ def test_the_unit_table_holds_every_unit_with_undecided_ones_first(results):
         p = row[column["P(above 10\u00a0%)"]].replace("\u00a0%", "")
         assert p in (f"{100 * exceedance[row[0]]:.1f}", "< 0.1", "> 99.9")
         if unit["mean"] >= 0.01:
-            assert row[column["modelled mean (95 %)"]].startswith(f"{100 * unit['mean']:.1f}\u00a0% (")
+            assert row[column["modelled mean (95\u00a0%)"]].startswith(f"{100 * unit['mean']:.1f}\u00a0% (")
     assert table.marks == tuple(outcome)
     assert table.heads[:3] == ("unit", "decision", "P(above 10\u00a0%)")
     unsurveyed = next(row for row in table.rows if row[column["sites"]] == "0")
-    assert unsurveyed[column["raw (95 %)"]] == "–"
+    assert unsurveyed[column["raw (95\u00a0%)"]] == "–"
 
 
 def test_coefficients_are_printed_as_odds_ratios_too(results):

@@ -173,7 +173,7 @@ def chart_odds_ratios(fit: Fit, ax: Axes | None = None) -> Axes:
         ax.set_yticks(y)
         ax.set_yticklabels(frame.index.astype(str))
         ax.set_ylim(-0.7, len(frame) - 0.3)
-        ax.set_xlabel("odds ratio per unit of the covariate as entered, 95 % interval")
+        ax.set_xlabel("odds ratio, 95 % interval")
         _tidy(ax, "Covariates")
     return ax
 

@@ -185,7 +185,7 @@ def _values(
         top = nice_ceiling(float(np.nanmax(values, initial=0.0)))
         mappable = ScalarMappable(Normalize(0.0, top), UNCERTAINTY)
         uncertainty_bar(sheet, mappable)
-        return values, mappable, "Uncertainty by unit: width of the 95 % interval"
+        return values, mappable, "Uncertainty by unit: width of 95 % interval"
     values = units.exceedance(edge).loc[frame["unit"].to_list()].to_numpy(dtype=float)
     mappable = ScalarMappable(Normalize(0.0, 1.0), EXCEEDANCE)
     exceedance_bar(sheet, mappable, edge, levels)

@@ -14,7 +14,7 @@ from prevmap.plan.classify import ABOVE, BELOW, UNDECIDED
 from prevmap.show.basis import unit_basis
 from prevmap.show.labels import short_signs
 from prevmap.show.palette import decision_styles
-from prevmap.show.wording import inequality, percent, probability, significant, threshold_text
+from prevmap.show.wording import NARROW_SPACE, inequality, percent, probability, significant, threshold_text
 
 if TYPE_CHECKING:
     from prevmap.plan.classify import UnitDecisions
@@ -162,9 +162,9 @@ def unit_table(content: ReportContent) -> Table | None:
     # What a reader looks for first stands beside the name: on a phone the rest has to be scrolled to.
     heads = ["unit", *(["decision"] if decisions is not None else [])]
     heads += [f"P(above {threshold_text(t)})" for t in content.thresholds]
-    heads += ["modelled mean (95 %)", "label", *(["part of"] if parents else [])]
-    heads += ["sites", "examined", "positive", "raw (95 %)", "basis"]
-    heads += [*(["people"] if people else []), *(["infected (95 %)"] if infected else [])]
+    heads += [f"modelled mean (95{NARROW_SPACE}%)", "label", *(["part of"] if parents else [])]
+    heads += ["sites", "examined", "positive", f"raw (95{NARROW_SPACE}%)", "basis"]
+    heads += [*(["people"] if people else []), *([f"infected (95{NARROW_SPACE}%)"] if infected else [])]
     left = {"unit", "label", "part of", "decision", "basis"}
     signs = short_signs(content.region.units)
     rows = []
