@@ -225,7 +225,7 @@ def test_units_whose_sites_have_no_position_are_not_called_unsurveyed(results):
     bare = np.flatnonzero((frame["basis"] != "own sites") & (frame["sites"] == 0))
     words = texts(map_units(with_frame(results.units, frame))).replace("\n", " ")
     assert f"Hatched: {len(bare)} of 12 units without a surveyed site" in words
-    assert "Hatched: 1 of 12 units with no site with a usable position" in words
+    assert "Hatched: 1 of 12 units with sites but none with a position" in words
 
 
 def test_units_without_a_prediction_are_named_and_not_hatched(results):
@@ -247,7 +247,7 @@ def test_units_weighted_by_area_or_predicted_in_part_are_named(results):
     frame.loc[3, "weighting"] = "area"
     frame.loc[4, "share_without_prediction"] = 0.25
     words = texts(map_units(with_frame(results.units, frame))).replace("\n", " ")
-    assert f"Weighted by area, since the population file counts nobody: {NAMES[3]}." in words
+    assert f"Weighted by area, since the population file counts nobody there: {NAMES[3]}." in words
     assert f"{NAMES[4]} (25.0 %)." in words
     older = results.units.frame.drop(columns=["weighting", "share_without_prediction"])
     assert "Weighted by area" not in texts(map_units(with_frame(results.units, older)))

@@ -331,7 +331,9 @@ def test_several_thresholds_give_a_map_and_a_column_each(results):
 def test_an_undecided_class_tells_the_threshold_that_is_decided(results):
     decisions = classify_units(results.units, [0.05, 0.10, 0.20])
     frame = decisions.frame.copy()
-    frame["decision"], frame["basis"] = "undecided", "own sites"
+    probable = frame["reason"].str.contains("short of") & (frame["decision"] == "undecided")
+    assert probable.any()
+    frame["decision"], frame["reason"] = "undecided", frame.loc[probable, "reason"].iloc[0]
     classes = [f"p_class_{k}" for k in range(4)]
     cases = {
         (0.0, 0.0005, 0.45, 0.5495): "at least 10\u00a0%, class undecided",
@@ -350,7 +352,7 @@ def test_an_undecided_class_tells_the_threshold_that_is_decided(results):
     assert [said[frame["unit"][i]] for i in range(len(cases))] == list(cases.values())
     assert set(table.marks) == {"undecided"}
     # A unit without sites of its own is not decided, so nothing is said of its thresholds either.
-    frame.loc[0, "basis"] = "neighbours"
+    frame.loc[0, "reason"] = next(r for r in decisions.frame["reason"] if "no surveyed site" in r)
     table = unit_table(content)
     assert next(row[1] for row in table.rows if row[0] == frame["unit"][0]) == "undecided"
 
@@ -364,13 +366,13 @@ def test_units_that_stand_on_less_are_named_under_the_table(results):
     units = SimpleNamespace(**{**vars(results.units), "frame": frame})
     content = content_of(SimpleNamespace(**{**vars(results), "units": units}))
     page = Page(render_report(content)).text
-    assert "1 of 12 units with no site with a usable position; the estimate comes from elsewhere." in page
+    assert "1 of 12 units with sites but none with a position; the estimate comes from elsewhere." in page
     assert f"1 unit has no prediction, since covariates are missing: {NAMES[1]}." in page
-    assert f"Weighted by area, since the population file counts nobody: {NAMES[2]}." in page
+    assert f"Weighted by area, since the population file counts nobody there: {NAMES[2]}." in page
     assert f"{NAMES[4]} (12.5 %)." in page
     table = unit_table(content)
     basis = {row[0]: row[table.heads.index("basis")] for row in table.rows}
-    assert basis[NAMES[0]] == "neighbours; no site with a usable position"
+    assert basis[NAMES[0]] == "neighbours; no site with a position"
     assert basis[NAMES[1]] == "no prediction: covariates missing"
 
 

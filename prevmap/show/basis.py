@@ -24,7 +24,7 @@ class UnitBasis:
     own : (n,) bool
         With surveyed sites in the model.
     unplaced : (n,) bool
-        Surveyed, but no site with a usable position: the estimate comes from elsewhere.
+        Surveyed, but at no site with a position: the estimate comes from elsewhere.
     bare : (n,) bool
         Without a surveyed site.
     unpredicted : (n,) bool
@@ -46,9 +46,7 @@ class UnitBasis:
 
     def named(self, mask: Mask) -> str:
         """Print the names of the chosen units; of many only the first ones."""
-        chosen = [name for name, here in zip(self.names, mask, strict=True) if here]
-        more = len(chosen) - _MOST_NAMES
-        return listed(chosen) if more <= 0 else f"{', '.join(chosen[:_MOST_NAMES])} and {more:,} more"
+        return _first([name for name, here in zip(self.names, mask, strict=True) if here])
 
     def sentences(self, *, hatched: bool = False) -> list[str]:
         """Count the units that do not rest on sites of their own, one sentence for each reason."""
@@ -57,7 +55,7 @@ class UnitBasis:
         found = []
         for mask, lack in (
             (self.bare, "without a surveyed site"),
-            (self.unplaced, "with no site with a usable position"),
+            (self.unplaced, "with sites but none with a position"),
         ):
             number = int(mask.sum())
             if number:
@@ -71,7 +69,13 @@ class UnitBasis:
         """Print the basis of one unit in a table cell."""
         if self.unpredicted[i]:
             return "no prediction: covariates missing"
-        return f"{basis}; no site with a usable position" if self.unplaced[i] else basis
+        return f"{basis}; no site with a position" if self.unplaced[i] else basis
+
+
+def _first(words: list[str]) -> str:
+    """List words; of many only the first ones, with the number of the others."""
+    more = len(words) - _MOST_NAMES
+    return listed(words) if more <= 0 else f"{', '.join(words[:_MOST_NAMES])} and {more:,} more"
 
 
 def unit_basis(frame: Any) -> UnitBasis:
@@ -84,16 +88,19 @@ def unit_basis(frame: Any) -> UnitBasis:
     return UnitBasis(own, rest & surveyed, rest & ~surveyed, unpredicted, names)
 
 
-def weight_notes(frame: Any) -> list[str]:
+def weight_notes(units: Any) -> list[str]:
     """Name units weighted by area although a population was given, and units predicted in part only."""
     notes = []
+    frame = units.frame
     names = [str(name) for name in frame["unit"]]
-    if "weighting" in frame:
-        # Where every unit is weighted by area no population was given, and the text says so already.
-        by_area = (frame["weighting"] == "area").to_numpy(dtype=bool)
-        if by_area.any() and not by_area.all():
-            chosen = [name for name, here in zip(names, by_area, strict=True) if here]
-            notes.append(f"Weighted by area, since the population file counts nobody: {listed(chosen)}.")
+    # Without any population the text says so already.
+    if "weighting" in frame and units.weighting == "population":
+        by_area = frame["weighting"] == "area"
+        chosen = [name for name, here in zip(names, by_area, strict=True) if here]
+        if chosen:
+            notes.append(
+                f"Weighted by area, since the population file counts nobody there: {_first(chosen)}."
+            )
     if "share_without_prediction" in frame:
         share = frame["share_without_prediction"].to_numpy(dtype=float)
         partly = (share > 0.0) & frame["mean"].notna().to_numpy(dtype=bool)
@@ -105,6 +112,6 @@ def weight_notes(frame: Any) -> list[str]:
         if parts:
             notes.append(
                 "Without a prediction for part of the unit, where a covariate is missing "
-                f"(share of its weight that the estimate leaves out): {listed(parts)}."
+                f"(share of its weight that the estimate leaves out): {_first(parts)}."
             )
     return notes

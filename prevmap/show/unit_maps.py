@@ -164,7 +164,7 @@ def draw_unit_map(
     reasons = [*(["no estimate"] if blank else []), *(["excluded area"] if ground.water else [])]
     if reasons:
         handles.append(blank_entry(reasons))
-    notes += weight_notes(units.frame)
+    notes += weight_notes(units)
     if labels:
         notes += write_labels(sheet, units.region, shapes, letters)
     return close_sheet(sheet, title=title, subtitle=_subtitle(units), handles=handles, notes=notes)
@@ -226,7 +226,7 @@ def _mark_guessed(
         if borrowed:
             hatch_area(sheet, shape)
     if basis.borrowed.any():
-        lack = "no surveyed site" if basis.bare.any() else "no site with a usable position"
+        lack = "no surveyed site" if basis.bare.any() else "no site with a position"
         handles.append(swatch(f"{lack} in the unit", "#FFFFFF", pattern="lines"))
     return basis.sentences(hatched=True)
 

@@ -124,10 +124,9 @@ def _unit_notes(content: ReportContent) -> list[str]:
     """Name the units whose estimate stands on less than the others'."""
     if content.units is None:
         return []
-    frame = content.units.frame
-    basis = unit_basis(frame)
+    basis = unit_basis(content.units.frame)
     lacking = bool((basis.borrowed | basis.unpredicted).any())
-    return [*(basis.sentences() if lacking else []), *weight_notes(frame)]
+    return [*(basis.sentences() if lacking else []), *weight_notes(content.units)]
 
 
 def _picture(figure: ReportFigure) -> dict[str, Any]:

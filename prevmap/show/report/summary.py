@@ -133,7 +133,7 @@ def _decided(content: ReportContent) -> list[str]:
     basis = unit_basis(decisions.units.frame)
     for mask, lack in (
         (basis.bare, "no surveyed site"),
-        (basis.unplaced, "no site with a usable position"),
+        (basis.unplaced, "no site with a position"),
     ):
         number = int((undecided & mask).sum())
         if number:

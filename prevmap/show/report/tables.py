@@ -198,7 +198,8 @@ def _decision(decisions: UnitDecisions, i: int) -> str:
     row = decisions.frame.iloc[i]
     outcome = str(row["decision"])
     edges = decisions.thresholds
-    if outcome != UNDECIDED or len(edges) == 1 or row["basis"] != "own sites":
+    # A unit that may not be decided at all, whatever its probability, is not decided in part either.
+    if outcome != UNDECIDED or len(edges) == 1 or "short of" not in row["reason"]:
         return inequality(outcome)
     p = [float(row[f"p_class_{k}"]) for k in range(len(edges) + 1)]
     levels = decisions.certainty
