@@ -364,25 +364,38 @@ WRONG = {
         r"\[survey\].*positives",
     ),
     "rows": (every_row_wrong, r"\[survey\].*sites.csv"),
-    "not a raster": (lambda folder: (folder / "wet.tif").write_text("no"), r"wet.tif"),
-    "raster without crs": (without_crs("wet.tif"), r"wet.tif.*coordinate"),
-    "raster elsewhere": (elsewhere("wet.tif"), r"wet"),
-    "population elsewhere": (elsewhere("people.tif"), r"people.tif"),
+    "not a raster": (lambda folder: (folder / "wet.tif").write_text("no"), r"\[\[covariate\]\].*wet.tif"),
+    "raster without crs": (without_crs("wet.tif"), r"\[\[covariate\]\].*wet.tif.*coordinate"),
+    "raster elsewhere": (elsewhere("wet.tif"), r"\[\[covariate\]\].*wet"),
+    "population elsewhere": (elsewhere("people.tif"), r"\[population\].*people.tif"),
     "not a layer": (lambda folder: (folder / "areas.geojson").write_text("{"), r"\[region\].*areas.geojson"),
     "unit column": (edit("study.toml", 'name = "area"', 'name = "areas"'), r'\[region\].*"?areas'),
     "one unit twice": (twice_the_same_unit, r"\[region\].*A"),
     "survey crs": (
         edit("study.toml", 'lon = "lon"\nlat = "lat"', 'x = "lon"\ny = "lat"\ncrs = "EPSG:32634"'),
-        r"coordinates|study area",
+        r"\[survey\].*(coordinates|study area)",
     ),
-    "mesh": (edit("study.toml", "mesh_edge_km = 10", "mesh_edge_km = 0.05"), r"edge"),
+    "mesh": (edit("study.toml", "mesh_edge_km = 10", "mesh_edge_km = 0.05"), r"\[model\].*edge"),
     "test": (
         edit("study.toml", "[report]", '[tests."smear"]\nsensitivity = 0.7\nspecificity = 1.0\n[report]'),
-        r"test",
+        r"\[tests\].*test",
     ),
     "test of no use": (
         edit("study.toml", "[report]", '[tests."smear"]\nsensitivity = 0.5\nspecificity = 0.5\n[report]'),
-        r"not above 1",
+        r"\[tests\].*not above 1",
+    ),
+    "grid": (edit("study.toml", "cell_km = 8", "cell_km = 0.0001"), r"\[grid\].*cell"),
+    "range": (
+        edit("study.toml", "range_km = { below = 10, probability = 0.05 }", "range_km = 1e9\nsd = 1e-9"),
+        r"\[prior\] range_km: fixed at 1e\+09 km; accepted: from 0\.\d+ to \d+",
+    ),
+    "sd": (
+        edit("study.toml", "[prior]", "[prior]\nsd = 1e-9"),
+        r"\[prior\] sd: fixed at 1e-09; accepted: from 1e-06 to 100",
+    ),
+    "nugget": (
+        edit("study.toml", "[prior]", "[prior]\nnugget_sd = 101"),
+        r"\[prior\] nugget_sd: fixed at 101; accepted: from 1e-06 to 100",
     ),
 }
 
@@ -395,7 +408,9 @@ def test_a_wrong_input_is_named_and_nothing_is_written(inputs, case, command, ca
     before = files(inputs)
     assert main([command, str(inputs / "study.toml")]) == 2
     printed = capsys.readouterr()
-    assert re.search(message, printed.err.split("\n[")[-1], flags=re.DOTALL), printed.err
+    told = printed.err.split("prevmap: ")[-1]
+    assert told.startswith("study.toml: ["), printed.err  # file and section, whichever command it was
+    assert re.search(message, told, flags=re.DOTALL), printed.err
     assert "Traceback" not in printed.err
     assert printed.out == ""
     assert files(inputs) == before
@@ -464,15 +479,15 @@ def test_a_study_of_a_survey_alone(inputs):
 
 def test_warnings_of_the_log_are_recorded(inputs, monkeypatch, no_figures):
     edit("study.toml", "[population]", '[population]\nkind = "counts"')(inputs)
-    from prevmap.study import chain
+    from prevmap.study import preparation
 
-    real = chain.read_survey
+    real = preparation.read_survey
 
     def warned(*arguments, **settings):
         logging.getLogger("prevmap.inputs").warning("a weak spot")
         return real(*arguments, **settings)
 
-    monkeypatch.setattr(chain, "read_survey", warned)
+    monkeypatch.setattr(preparation, "read_survey", warned)
     result = prevmap.read_study(inputs / "study.toml").run()
     assert "a weak spot" in result.record["warnings"]
 

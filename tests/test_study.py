@@ -200,16 +200,27 @@ REFUSED = {
     ),
     "per cent": (
         START + SURVEY + "[decision]\nthresholds = [10]",
-        r"thresholds: found \[10\]; accepted: .*0.10\] for",
+        r"\[decision\] thresholds: found 10; .*If 10 per cent is meant, write 0\.1\.",
     ),
     "one threshold": (
         START + SURVEY + "[decision]\nthresholds = 0.1",
         r"thresholds: found 0.1; accepted: a list",
     ),
-    "order": (START + SURVEY + "[decision]\nthresholds = [0.2, 0.1]", r"in increasing order"),
+    "order": (
+        START + SURVEY + "[decision]\nthresholds = [0.2, 0.1]",
+        r"0.2 is followed by 0.1; thresholds must",
+    ),
     "certainty": (
         START + SURVEY + "[decision]\nthresholds = [0.1]\ncertainty = 0.4",
-        r"certainty: found 0.4; accepted: a probability above 0.5",
+        r"certainty: found 0.4; a certainty is a probability above 0.5",
+    ),
+    "certainty of one side": (
+        START + SURVEY + "[decision]\nthresholds = [0.1]\ncertainty = { above = 0.9 }",
+        r"\[decision\] certainty: found the keys above; a table needs exactly",
+    ),
+    "certainty below": (
+        START + SURVEY + "[decision]\nthresholds = [0.1]\ncertainty = { above = 0.9, below = 90 }",
+        r"\[decision\] certainty.below: found 90",
     ),
     "totals without units": (
         START + SURVEY + '[population]\nraster = "areas.geojson"\nunit_total = "people"',

@@ -10,10 +10,13 @@ import numpy as np
 
 from prevmap.engine.posterior import LogPrior
 from prevmap.engine.priors import pc_range, pc_range_median, pc_sd, pc_sd_median
+from prevmap.errors import InputError
 from prevmap.model.spec import Above, Below, Priors
 
 DEFAULT_RANGE_SHARE = 0.05  # of the region's diagonal
 DEFAULT_PROBABILITY = 0.05
+MOST_DIAGONALS = 1000.0  # a fixed range above that, or below its inverse, cannot be told from a slip
+FIXED_SD = (1e-6, 100.0)  # on the logit scale
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,7 +48,13 @@ class Resolved:
 
 
 def resolve_priors(priors: Priors, diagonal_km: float) -> tuple[Resolved, Resolved, Resolved]:
-    """Priors of range, sd and nugget sd for a study area with that diagonal in km."""
+    """Priors of range, sd and nugget sd for a study area with that diagonal in km.
+
+    Raises
+    ------
+    InputError
+        A fixed range or sd is too large or too small for any map.
+    """
     given = priors.range_km
     default = given is None
     if given is None:
@@ -58,15 +67,21 @@ def resolve_priors(priors: Priors, diagonal_km: float) -> tuple[Resolved, Resolv
             f"P(range < {given.value:g} km) = {given.probability:g}{origin}",
         )
     else:
+        shortest, longest = diagonal_km / MOST_DIAGONALS, diagonal_km * MOST_DIAGONALS
+        if not shortest <= float(given) <= longest:
+            raise InputError(
+                f"range_km: fixed at {float(given):g} km; accepted: from {shortest:.3g} to {longest:.3g} km, a "
+                f"thousandth to a thousand times the study area's diagonal"
+            )
         of_range = Resolved(None, float(given), f"range fixed at {float(given):g} km")
     return (
         of_range,
-        _deviation(priors.sd, "sd of the field"),
-        _deviation(priors.nugget_sd, "sd of the nugget"),
+        _deviation(priors.sd, "sd", "sd of the field"),
+        _deviation(priors.nugget_sd, "nugget_sd", "sd of the nugget"),
     )
 
 
-def _deviation(given: Above | float | None, name: str) -> Resolved:
+def _deviation(given: Above | float | None, key: str, name: str) -> Resolved:
     if given is None:
         return Resolved(None, 0.0, "no nugget")
     if isinstance(given, Above):
@@ -74,6 +89,11 @@ def _deviation(given: Above | float | None, name: str) -> Resolved:
             partial(pc_sd, sd0=given.value, alpha=given.probability),
             pc_sd_median(given.value, given.probability),
             f"P({name} > {given.value:g}) = {given.probability:g} on the logit scale",
+        )
+    least, most = FIXED_SD
+    if not least <= float(given) <= most:
+        raise InputError(
+            f"{key}: fixed at {float(given):g}; accepted: from {least:g} to {most:g} on the logit scale"
         )
     return Resolved(None, float(given), f"{name} fixed at {float(given):g} on the logit scale")
 

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
+import contextlib
 import datetime
 import difflib
-import itertools
 import math
-from collections.abc import Callable, Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, NoReturn
@@ -211,26 +211,30 @@ def date(value: Any, place: Place) -> str:
 
 def thresholds(value: Any, place: Place) -> tuple[float, ...]:
     """Accept a list of prevalences, strictly increasing, each strictly between 0 and 1."""
-    accepted = "a list of prevalences above 0 and below 1 in increasing order, such as [0.10] for 10 %"
-    if not isinstance(value, list) or not value or not all(_is_number(item) for item in value):
-        place.refuse(value, accepted)
-    rising = all(low < high for low, high in itertools.pairwise(value))
-    if not rising or not all(0 < item < 1 for item in value):
-        place.refuse(value, accepted)
-    return tuple(float(item) for item in value)
+    from prevmap.plan.classify import checked_thresholds  # a study without a decision needs no pandas
+
+    if not isinstance(value, list):
+        place.refuse(value, "a list of prevalences, such as [0.10] for 10 %")
+    with _placed(place):
+        return checked_thresholds(value)
 
 
 def certainty(value: Any, place: Place) -> float | dict[str, float]:
     """Accept a probability above 0.5, at most 1, or one each for above and below."""
-    accepted = "a probability above 0.5 and at most 1, or { above = .., below = .. }"
-    if isinstance(value, Mapping):
-        unknown = [name for name in value if name not in ("above", "below")]
-        if unknown or set(value) != {"above", "below"}:
-            place.refuse(value, accepted)
-        return {name: certainty(value[name], place.within(name)) for name in ("above", "below")}  # type: ignore[misc]  # tables do not nest
-    if not _is_number(value) or not 0.5 < value <= 1:
-        place.refuse(value, accepted)
-    return float(value)
+    from prevmap.plan.classify import checked_certainty  # as for thresholds
+
+    with _placed(place):
+        levels = checked_certainty(value)
+    return levels if isinstance(value, Mapping) else levels["above"]
+
+
+@contextlib.contextmanager
+def _placed(place: Place) -> Iterator[None]:
+    """Put the file and the section before the message of a check that names the key itself."""
+    try:
+        yield
+    except InputError as error:
+        raise InputError(f"{place.at('')} {error}") from error
 
 
 @dataclass(frozen=True, slots=True)

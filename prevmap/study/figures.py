@@ -35,11 +35,9 @@ def write_figures(
     dict of str to ReportFigure
         As the report prints them.
     """
-    certainty = 0.90 if study.decision is None else study.decision.certainty
+    certainty = {} if study.decision is None else {"certainty": study.decision.certainty}
     surface = replace(result.surface, fit=fit)
-    figures = report_figures(
-        fit, surface, result.units, result.decisions, result.thresholds, certainty=certainty
-    )
+    figures = report_figures(fit, surface, result.units, result.decisions, result.thresholds, **certainty)
     for name in ("sites", "prevalence"):
         note = f" Sites are moved to the middle of squares of {square_m / 1000:.2g} km."
         figures[name] = replace(figures[name], caption=figures[name].caption + note)

@@ -9,15 +9,11 @@ import numpy as np
 import pandas as pd
 from geopandas import GeoDataFrame
 
-from prevmap.errors import InputError
-from prevmap.inputs.design import design
-from prevmap.inputs.findings import findings_frame
-from prevmap.inputs.placement import assign_units, assign_unplaced, site_findings
+from prevmap.inputs.findings import findings_frame, number_text
 from prevmap.model import meshing
-from prevmap.model.prior import default_margin_km, resolve_priors
-from prevmap.model.rows import row_accuracy
 from prevmap.model.spec import PrevalenceModel
-from prevmap.study.chain import StudyInputs, build_model, joined_findings, naming, read_inputs
+from prevmap.study.chain import joined_findings
+from prevmap.study.preparation import StudyInputs, build_model, naming, prepare, read_inputs
 from prevmap.study.progress import Stages
 from prevmap.study.schema import Study
 
@@ -76,22 +72,10 @@ def inspect_study(study: Study, *, progress: bool) -> Inspection:
 def _inspected(study: Study, inputs: StudyInputs) -> Inspection:
     model = build_model(study, inputs.covariates)
     survey, region, grid = inputs.survey, inputs.region, inputs.grid
-    if not len(survey.frame):
-        raise InputError(f"{study.path.name}: [survey] no row has a position: no model can be fitted")
-    of_range = resolve_priors(model.priors, meshing.diagonal_km(region.boundary))[0]
-    margin_km = model.mesh.margin_km or default_margin_km(of_range)
-    near, findings = site_findings(survey.frame, region, margin_km)
-    with naming(study, "[survey]"):
-        if not near.any():
-            raise InputError("no site lies in or near the study area: check the coordinates of both")
-    findings += assign_units(survey, region, near)[1] + assign_unplaced(survey, region)[1]
-    frame = survey.frame[near]
+    ready = prepare(study, inputs, model)
+    frame, designed = ready.frame, ready.designed
     with naming(study, "[[covariate]]"):
-        designed = design(model.covariates, frame, frame["site"])
         matrix = designed.matrix(grid.frame_points(), grid=True)
-    frame = frame[designed.kept]
-    with naming(study, "[tests]"):
-        row_accuracy(survey, np.isin(survey.frame.index, frame.index), model.tests)
     lines = [
         f"Study file: {study.path}",
         f"Survey: {survey.rows_read:,} rows read, {len(survey.frame):,} accepted, "
@@ -101,7 +85,7 @@ def _inspected(study: Study, inputs: StudyInputs) -> Inspection:
         f"Grid: {len(grid):,} cells of {grid.cell_km:.4g} km"
         + ("" if grid.people is None else f"; {grid.people.sum():,.0f} people in them"),
         *_covariate_lines(designed.terms, matrix),
-        _engine_line(study, inputs, model, frame, of_range.middle, margin_km),
+        _engine_line(study, inputs, model, frame, ready.range_km, ready.margin_km),
         f"Prevalence: nugget {study.model.nugget}; {study.model.draws:,} draws; seed {study.model.seed}",
         _decision_line(study, inputs),
         f"Results would go to {study.output.folder}",
@@ -111,7 +95,7 @@ def _inspected(study: Study, inputs: StudyInputs) -> Inspection:
         region.findings,
         designed.findings,
         *inputs.grid_findings,
-        findings_frame(findings),
+        findings_frame(ready.findings),
     ]
     return Inspection(tuple(lines), joined_findings(tables))
 
@@ -155,7 +139,7 @@ def _engine_line(
     with naming(study, "[model]"):
         nodes = meshing.mesh_over(zone, edge, margin_km, model.mesh.max_nodes).nodes
     origin = "as stated" if model.mesh.edge_km else "by default; a fit may refine it once"
-    mesh = f"mesh of {nodes:,} nodes, edge {edge:.3g} km {origin}, margin {margin_km:.3g} km"
+    mesh = f"mesh of {nodes:,} nodes, edge {edge:.3g} km {origin}, margin {number_text(margin_km)} km"
     return f"Fit: {sites:,} sites, {mesh}"
 
 

@@ -183,6 +183,6 @@ def _report(
             figures=figures,
             record={**known, "study": study.path.name, "command": f"prevmap run {study.path.name}"},
             statements=statements,
-            certainty=0.90 if study.decision is None else study.decision.certainty,
+            **({} if study.decision is None else {"certainty": study.decision.certainty}),
         )
     )
