@@ -222,7 +222,7 @@ def test_the_unit_table_holds_every_unit_with_undecided_ones_first(results):
         assert row[column["decision"]] == decisions.loc[row[0], "decision"]
         assert row[column["basis"]] == unit["basis"]
         p = row[column["P(above 10\u00a0%)"]].replace("\u00a0%", "")
-        assert p in (f"{100 * exceedance[row[0]]:.1f}", "< 0.1", "> 99.9")
+        assert p in (f"{100 * exceedance[row[0]]:.1f}", "<\u00a00.1", ">\u00a099.9")
         if unit["mean"] >= 0.01:
             assert row[column["modelled mean (95\u00a0%)"]].startswith(f"{100 * unit['mean']:.1f}\u00a0% (")
     assert table.marks == tuple(outcome)

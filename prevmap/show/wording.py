@@ -68,9 +68,9 @@ def probability(p: float) -> str:
     if p is None or not math.isfinite(p):
         return "–"
     if p < 0.001:
-        return f"< 0.1{NARROW_SPACE}%"
+        return f"<{NARROW_SPACE}0.1{NARROW_SPACE}%"
     if p > 0.999:
-        return f"> 99.9{NARROW_SPACE}%"
+        return f">{NARROW_SPACE}99.9{NARROW_SPACE}%"
     return f"{100.0 * p:.1f}{NARROW_SPACE}%"
 
 

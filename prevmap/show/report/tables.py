@@ -180,7 +180,11 @@ def unit_table(content: ReportContent) -> Table | None:
         cells += [_whole(unit["population"])] if people else []
         if infected:
             low, high = _whole(unit["infected_lower95"]), _whole(unit["infected_upper95"])
-            cells.append(f"{_whole(unit['infected_mean'])} ({low} to {high})" if low != "–" else "–")
+            cells.append(
+                f"{_whole(unit['infected_mean'])} ({low}{NARROW_SPACE}to{NARROW_SPACE}{high})"
+                if low != "–"
+                else "–"
+            )
         rows.append(tuple(cells))
     numeric = frozenset(i for i, head in enumerate(heads) if head not in left)
     marks: tuple[str, ...] = ()
@@ -243,7 +247,7 @@ def _interval(row: Any, centre: str, lower: str, upper: str) -> str:
     if not math.isfinite(values[0]):
         return "–"
     middle, low, high = (percent(v).replace("\u00a0%", "") for v in values)
-    return f"{middle}\u00a0% ({low} to {high})"
+    return f"{middle}{NARROW_SPACE}% ({low}{NARROW_SPACE}to{NARROW_SPACE}{high})"
 
 
 def _signed(value: float) -> str:
