@@ -9,6 +9,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 import prevmap
+from prevmap.inputs.comparison import FEWEST_UNSEEN, unseen_zeros
 
 NAMES = {"examined": "examined", "positive": "positive"}
 PLACED = {**NAMES, "lon": "lon", "lat": "lat"}
@@ -245,6 +246,40 @@ def test_positives_only_reporting_is_doubted_by_the_zeros_that_should_be_there()
     assert faultless(prevmap.Survey.from_frame(with_zero, **LINE_UP))
     high = sites(40, examined=20, positive=[9, 10, 11, 8] * 10)
     assert faultless(prevmap.Survey.from_frame(high, **LINE_UP))
+
+
+def overdispersed(rng, n):
+    """Positives of n schools whose prevalence varies widely, 40 examined in each."""
+    return rng.binomial(40, rng.beta(0.8, 5.2, n))
+
+
+def test_positives_only_reporting_is_doubted_where_prevalence_varies_between_sites(rng):
+    positive = overdispersed(rng, 200)
+    some = positive[positive > 0]
+    warning = only(
+        prevmap.Survey.from_frame(sites(len(some), examined=40, positive=some), **LINE_UP),
+        severity="warning",
+        field="positive",
+    )
+    once, twice = (some == 1).sum(), (some == 2).sum()
+    # One common prevalence would not explain it: it expects hardly a zero in these schools.
+    assert len(some) * (1 - some.mean() / 40) ** 40 < 1.0
+    assert f"with {once} sites with one positive and {twice} with two" in warning["what"]
+    expected = once * (once - 1) / (2 * (twice + 1))
+    assert f"about {expected:.0f} or more would be expected" in warning["what"]
+    assert expected < 2 * (positive == 0).sum()
+    assert faultless(prevmap.Survey.from_frame(sites(200, examined=40, positive=positive), **LINE_UP))
+
+
+def test_surveys_of_high_prevalence_without_a_zero_are_seldom_doubted(rng):
+    doubted = 0
+    for _ in range(200):
+        positive = rng.binomial(30, rng.beta(4.0, 6.0, 60))
+        if (positive > 0).all():
+            doubted += unseen_zeros(positive) >= FEWEST_UNSEEN
+    assert doubted <= 4
+    varied = sites(12, examined=30, positive=[1, 2, 5, 9, 12, 14, 1, 20, 3, 8, 2, 11])
+    assert faultless(prevmap.Survey.from_frame(varied, **LINE_UP))
 
 
 def test_zeros_are_counted_by_site_and_not_by_row():

@@ -8,6 +8,7 @@ from typing import Any
 import geopandas as gpd
 import numpy as np
 import pandas as pd
+from numpy.typing import NDArray
 from pyproj import CRS, Geod
 
 from prevmap.inputs.findings import Finding, listed, row_label
@@ -18,6 +19,10 @@ LISTED_SITES = 10
 
 # A survey without one negative site is doubted where that has less than this probability.
 NO_ZERO_PROBABILITY = 0.01
+
+# Or where at least this many should be there whatever the spread between sites. Of complete surveys without
+# a zero, simulated with 10 to 150 sites, about 1 in 100 and at most 1 in 40 reach it.
+FEWEST_UNSEEN = 4.0
 
 
 def comparison_findings(frame: gpd.GeoDataFrame, unplaced: pd.DataFrame) -> list[Finding]:
@@ -114,25 +119,63 @@ def _shared_positions(frame: gpd.GeoDataFrame) -> list[Finding]:
 def _missing_zeros(rows: pd.DataFrame) -> list[Finding]:
     """Warn where no site is free of positives although some should be.
 
-    Under one common prevalence p the probability that none of the sites has zero positive is
-    prod(1 - (1 - p)^n). Real prevalence varies between sites, which makes zeros more likely still, and
-    leaving zeros out raises p: both make the check cautious.
+    Two rules, either is enough. Under one common prevalence p the probability that none of the sites has
+    zero positive is prod(1 - (1 - p)^n). Where prevalence varies between sites, those with one and with two
+    positives tell how many with none there are at least (`unseen_zeros`).
     """
     sites = rows.groupby("site")[["examined", "positive"]].sum().astype(float)
     examined = sites["examined"].to_numpy(dtype=float)
-    share = float(sites["positive"].sum() / examined.sum())
-    if (sites["positive"] == 0).any() or share >= 1.0:
+    positive = sites["positive"].to_numpy(dtype=float)
+    share = float(positive.sum() / examined.sum())
+    if (positive == 0).any() or share >= 1.0:
         return []
     zero = np.exp(examined * np.log1p(-share))
     none = float(np.exp(np.log1p(-zero).sum()))
-    if none >= NO_ZERO_PROBABILITY:
+    unseen = unseen_zeros(positive)
+    if none < NO_ZERO_PROBABILITY:
+        why = (
+            f"at the overall {100 * share:.1f} % about {zero.sum():.1f} would be expected, and none at all "
+            f"has probability {none:.2g}"
+        )
+    elif unseen >= FEWEST_UNSEEN:
+        why = (
+            f"with {int((positive == 1).sum())} sites with one positive and {int((positive == 2).sum())} with "
+            f"two, about {unseen:.0f} or more would be expected"
+        )
+    else:
         return []
-    what = (
-        f"none of the {len(sites)} sites has zero positive; at the overall {100 * share:.1f} % about "
-        f"{zero.sum():.1f} would be expected, and none at all has probability {none:.2g}"
-    )
+    what = f"none of the {len(sites)} sites has zero positive; {why}"
     action = "used as they are; if sites without positives were left out, prevalence is too high: add them"
     return [Finding(None, None, "positive", "warning", what, action)]
+
+
+def unseen_zeros(positive: NDArray[np.float64]) -> float:
+    """Return a lower bound of the number of sites with zero positive, from those with one and with two.
+
+    Parameters
+    ----------
+    positive : (n,) float
+        Positive persons at each site.
+
+    Returns
+    -------
+    float
+        f1 (f1 - 1) / (2 (f2 + 1)), with f1 and f2 the numbers of sites with exactly one and two positives: the
+        form of f1^2 / (2 f2) that needs no f2 above zero.
+
+    Notes
+    -----
+    Chao, A. (1984). Nonparametric estimation of the number of classes in a population. Scandinavian Journal
+    of Statistics 11:265-270. By the inequality of Cauchy and Schwarz it holds for counts that are Poisson
+    with any distribution of means, so that it does not mistake spread between sites for missing zeros.
+
+    Examples
+    --------
+    >>> unseen_zeros(np.array([1.0, 1.0, 1.0, 1.0, 2.0, 2.0, 7.0]))
+    2.0
+    """
+    once, twice = float((positive == 1).sum()), float((positive == 2).sum())
+    return once * (once - 1.0) / (2.0 * (twice + 1.0))
 
 
 def _comparable(cell: object) -> object:
@@ -166,4 +209,4 @@ def _distance_km(crs: CRS, x: np.ndarray, y: np.ndarray) -> np.ndarray:
 
 
 def _length(km: float) -> str:
-    return f"{km:.1f} km" if km >= 1.0 else f"{1000.0 * km:.0f} m"
+    return f"{km:,.1f} km" if km >= 1.0 else f"{1000.0 * km:.0f} m"
