@@ -10,7 +10,8 @@ import pandas as pd
 import shapely
 from numpy.typing import NDArray
 
-from prevmap.inputs.findings import Finding, row_label
+from prevmap.errors import InputError
+from prevmap.inputs.findings import Finding, number_text, row_label
 from prevmap.inputs.layer import nearest
 
 if TYPE_CHECKING:
@@ -50,19 +51,61 @@ def site_findings(
     findings = []
     for place in np.flatnonzero(distance_km > 0.0):
         row, site = row_label(frame.index[place]), sites[place]
-        away = f"{distance_km[place]:.3g} km"
+        away = f"{number_text(distance_km[place])} km"
         if excluded[place]:
             what = f"lies on excluded land (such as water), {away} from the study area's land"
             findings.append(Finding(row, site, "position", "note", what, "kept; check the position"))
         elif keep[place]:
             what = f"lies {away} outside the study area"
-            action = f"kept: it is within {margin_km:.3g} km"
+            action = f"kept: it is within {number_text(margin_km)} km"
             findings.append(Finding(row, site, "position", "note", what, action))
         else:
-            what = f"lies {away} outside the study area (more than {margin_km:.3g} km)"
+            what = f"lies {away} outside the study area (more than {number_text(margin_km)} km)"
             action = "row not used; check longitude and latitude, or the region"
             findings.append(Finding(row, site, "position", "error", what, action))
     return keep, findings
+
+
+def exchange_hint(frame: gpd.GeoDataFrame, region: Region, margin_km: float) -> str:
+    """Return a sentence where sites miss the region and would meet it with lon and lat exchanged, else "".
+
+    Nothing is exchanged: which of the two is at fault, and whether, only their makers can know.
+
+    Parameters
+    ----------
+    frame : GeoDataFrame, n rows
+        Accepted rows of a survey, in degrees; in another coordinate system there is no hint.
+    region : Region
+        The study area. Its file may be the one with exchanged coordinates: the sentence is the same.
+    margin_km : float
+        Sites outside the region by up to this distance meet it.
+
+    Returns
+    -------
+    str
+        For the end of a message, beginning with a space; empty where a site meets the region as it is, or
+        most would not with the coordinates exchanged.
+    """
+    if not len(frame) or frame.crs is None or not frame.crs.is_geographic:
+        return ""
+    lon, lat = frame.geometry.x.to_numpy(), frame.geometry.y.to_numpy()
+    possible = np.abs(lon) <= 90.0
+    exchanged = gpd.GeoSeries(gpd.points_from_xy(lat[possible], lon[possible]), crs=frame.crs)
+    near = int(_near(exchanged, region, margin_km).sum())
+    if _near(frame.geometry, region, margin_km).any() or 2 * near <= len(frame):
+        return ""
+    return (
+        f" With lon and lat exchanged, {near:,} of {len(frame):,} rows would lie in or near it: exchange lon= "
+        f"and lat= if so, or correct {region.source} if its own coordinates are exchanged"
+    )
+
+
+def _near(points: gpd.GeoSeries, region: Region, margin_km: float) -> NDArray[np.bool_]:
+    try:
+        xy = 1000.0 * region.project(points)
+    except InputError:  # too far away for the region's coordinate system
+        return np.zeros(len(points), dtype=bool)
+    return np.asarray(shapely.distance(region.boundary, shapely.points(xy)) <= 1000.0 * margin_km)
 
 
 def assign_units(
@@ -142,6 +185,7 @@ def assign_unplaced(survey: Survey, region: Region) -> tuple[NDArray[np.int64], 
         Row of ``region.units`` for each row of ``survey.unplaced``, by the unit's name or else its code; -1
         where the region has no such unit.
     findings : list of Finding
+        Units the region lacks, and those it writes in another way.
     """
     frame = survey.unplaced
     unit = np.full(len(frame), OUTSIDE, dtype=np.int64)
@@ -152,13 +196,14 @@ def assign_unplaced(survey: Survey, region: Region) -> tuple[NDArray[np.int64], 
     for place, text in enumerate(_texts(frame, "unit")):
         row = row_label(frame.index[place])
         unit[place] = _place_of(text or "", names, codes)
-        if unit[place] >= 0:
-            what, severity = f"has no position; its unit is {names[unit[place]]!r}", "note"
-            action = "enters only the unit's direct estimate"
-        else:
+        if unit[place] < 0:
             what = f"has no position, and its unit {text!r} is not in the region{_hint(text or '', names)}"
-            severity, action = "error", "row not used"
-        findings.append(Finding(row, sites[place], "unit", severity, what, action))  # type: ignore[arg-type]
+            findings.append(Finding(row, sites[place], "unit", "error", what, "row not used"))
+        elif names[unit[place]] != (text or "").strip():
+            # A unit named as in the region needs no note: the survey has one for every such row.
+            what = f"has no position; its unit {text!r} is {names[unit[place]]!r} of the region"
+            action = "enters only the unit's direct estimate"
+            findings.append(Finding(row, sites[place], "unit", "note", what, action))
     return unit, findings
 
 

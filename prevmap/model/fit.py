@@ -25,7 +25,7 @@ from prevmap.errors import InputError
 from prevmap.inputs.design import Design, design
 from prevmap.inputs.findings import Finding, findings_frame
 from prevmap.inputs.grid import Grid
-from prevmap.inputs.placement import assign_units, assign_unplaced, site_findings
+from prevmap.inputs.placement import assign_units, assign_unplaced, exchange_hint, site_findings
 from prevmap.inputs.region import Region, hull_region
 from prevmap.inputs.survey import Survey
 from prevmap.model import meshing
@@ -251,7 +251,8 @@ def fit_model(
     inside, position_findings = site_findings(survey.frame, region, margin_km)
     if not np.any(inside):
         raise InputError(
-            "no site lies in or near the study area: check the coordinates of the survey and of the region",
+            "no site lies in or near the study area: check the coordinates of the survey and of the region."
+            + exchange_hint(survey.frame, region, margin_km),
             tuple(position_findings),
         )
     near = survey.frame[inside]
