@@ -154,6 +154,32 @@ def test_rows_without_a_value_are_left_out_with_their_reason(tmp_path, sites):
     assert all("no data in rain.tif" in what for what in errors.loc[errors["field"] == "rain", "what"])
 
 
+def test_an_undeclared_mark_of_missing_data_is_a_warning(tmp_path, sites, rng):
+    values = rng.uniform(100.0, 900.0, (30, 40)).astype(np.float32)
+    gaps = rng.random((30, 40)) < 0.3
+    marked = np.where(gaps, np.float32(-9999.0), values)
+    rain = write(tmp_path / "rain.tif", marked, left=0.0, top=30_000.0)
+    made = design([prevmap.RasterCovariate(rain)], sites, ids(sites))
+    [warning] = made.findings.loc[made.findings["severity"] == "warning"].to_dict("records")
+    assert warning["field"] == "rain"
+    assert f"rain.tif holds -9999 in {100 * gaps.mean():.2g} % of the pixels" in warning["what"]
+    assert made.kept.all()  # used as a value: nothing is dropped without a word
+    touched = int((prevmap.RasterCovariate(rain).raw(sites) < values[~gaps].min()).sum())
+    assert touched > 10
+    assert f"are read at {touched} of 40 rows" in warning["what"]
+    declared = write(tmp_path / "declared.tif", marked, left=0.0, top=30_000.0, nodata=-9999.0)
+    findings = design([prevmap.RasterCovariate(declared)], sites, ids(sites)).findings
+    assert not (findings["severity"] == "warning").any()
+
+
+def test_a_band_that_nobody_chose_is_noted(tmp_path, sites, rng):
+    path = write(tmp_path / "rain.tif", rng.uniform(0, 900, (30, 40)), left=0.0, top=30_000.0, bands=2)
+    [note] = design([prevmap.RasterCovariate(path)], sites, ids(sites)).findings.to_dict("records")
+    assert (note["severity"], note["what"]) == ("note", "rain.tif has 2 bands")
+    assert len(design([prevmap.RasterCovariate(path, band=1)], sites, ids(sites)).findings) == 0
+    assert len(design([prevmap.RasterCovariate(path, band=2)], sites, ids(sites)).findings) == 0
+
+
 def test_nothing_to_learn_from_is_an_input_error(tmp_path, sites):
     constant = sites.assign(height=5.0)
     with pytest.raises(InputError, match=r"'height' is constant: 5 at every site used \(40 of them\)"):

@@ -161,6 +161,11 @@ REFUSED = {
         r'\[\[covariate\]\] 1 "wet" accepted: one of raster.*found column and factor',
     ),
     "covariate of no source": (START + SURVEY + '[[covariate]]\nname = "wet"', r"found none of them"),
+    "band of a column": (
+        START + SURVEY + '[[covariate]]\ncolumn = "a"\nat = 1\nband = 2',
+        r'"band" does not apply to a covariate given by column',
+    ),
+    "band zero": (START + SURVEY + '[[covariate]]\nraster = "areas.geojson"\nband = 0', r"band: found 0"),
     "column without at": (START + SURVEY + '[[covariate]]\ncolumn = "a"', r'1 the key "at" is missing'),
     "at for a raster": (
         START + SURVEY + '[[covariate]]\nraster = "areas.geojson"\nat = 3',

@@ -16,8 +16,10 @@ from pyproj import CRS, Transformer
 
 from prevmap.errors import InputError
 from prevmap.inputs.features import nearest_km
+from prevmap.inputs.findings import Finding
 from prevmap.inputs.layer import column, label_text
-from prevmap.inputs.raster import describe_bounds, open_raster, sample
+from prevmap.inputs.raster import Raster, describe_bounds, open_raster, sample
+from prevmap.inputs.sentinel import find_sentinels
 from prevmap.inputs.working_crs import choose_working_crs
 
 Floats = NDArray[np.float64]
@@ -49,8 +51,8 @@ class RasterCovariate:
         Applied to the values before centring and scaling.
     scale : bool
         Centre and scale by the accepted sites.
-    band : int
-        Which band, from 1.
+    band : int, optional
+        Which band, from 1. Without it the first, with a note where the file has several.
     """
 
     path: str | Path
@@ -58,7 +60,7 @@ class RasterCovariate:
     _: KW_ONLY
     transform: Transform | None = None
     scale: bool = True
-    band: int = 1
+    band: int | None = None
 
     def __post_init__(self) -> None:
         _check_settings(self.label, self.transform, self.scale)
@@ -75,25 +77,66 @@ class RasterCovariate:
 
     def raw(self, points: gpd.GeoDataFrame | gpd.GeoSeries) -> Floats:
         """Return (n,) raster values before `transform`, NaN where there is none."""
-        raster = open_raster(self.path, band=self.band)
-        xy = _coordinates(points)
-        if not len(xy):
-            return np.empty(0)
-        centre = (float(np.nanmedian(xy[:, 0])), float(np.nanmedian(xy[:, 1])))
-        x, y = raster.from_crs(_crs(points), centre)(xy[:, 0], xy[:, 1])
-        return sample(raster, np.asarray(x, dtype=float), np.asarray(y, dtype=float))
+        raster = self._opened()
+        return sample(raster, *self._own_coordinates(raster, points, _coordinates(points)))
 
     def values(self, points: gpd.GeoDataFrame | gpd.GeoSeries) -> Floats:
         """Return (n,) values at points after `transform`, NaN where there is none."""
         return transformed(self.raw(points), self.transform)
 
+    def findings(self, points: gpd.GeoDataFrame | gpd.GeoSeries) -> list[Finding]:
+        """Return what is doubtful in the raster: a band nobody chose, undeclared marks of missing data.
+
+        Parameters
+        ----------
+        points : GeoDataFrame or GeoSeries
+            The sites; the raster is looked at between and round them.
+        """
+        raster = self._opened()
+        found: list[Finding] = []
+        if self.band is None and raster.bands > 1:
+            what = f"{Path(self.path).name} has {raster.bands} bands"
+            action = "band 1 is used; choose another by band"
+            found.append(Finding(None, None, self.label, "note", what, action))
+        xy = _coordinates(points)
+        x, y = self._own_coordinates(raster, points, xy[np.isfinite(xy).all(axis=1)])
+        placed = np.isfinite(x) & np.isfinite(y)
+        if not placed.any():
+            return found
+        left, bottom, right, top = x[placed].min(), y[placed].min(), x[placed].max(), y[placed].max()
+        wider = max(0.1 * (right - left), raster.width), max(0.1 * (top - bottom), raster.height)
+        bounds = (left - wider[0], bottom - wider[1], right + wider[0], top + wider[1])
+        suspects = find_sentinels(raster, bounds)
+        values = sample(raster, x[placed], y[placed]) if suspects else np.empty(0)
+        for each in suspects:
+            touched = int(((values < each.lower) | (values > each.upper)).sum())
+            what = (
+                f"{Path(self.path).name} holds {each.value:.6g} in {100.0 * each.share:.2g} % of the pixels "
+                f"round the sites, its other values lie between {each.lower:.4g} and {each.upper:.4g}; values "
+                f"outside those are read at {touched} of {int(placed.sum())} rows"
+            )
+            action = "used as a value; if it stands for missing data, declare it in the file as nodata"
+            found.append(Finding(None, None, self.label, "warning", what, action))
+        return found
+
+    def _opened(self) -> Raster:
+        return open_raster(self.path, band=1 if self.band is None else self.band)
+
+    def _own_coordinates(
+        self, raster: Raster, points: gpd.GeoDataFrame | gpd.GeoSeries, xy: Floats
+    ) -> tuple[Floats, Floats]:
+        """Return (n,) x and y in the raster's coordinates of (n, 2) coordinates of the points."""
+        if not len(xy):
+            return np.empty(0), np.empty(0)
+        centre = (float(np.nanmedian(xy[:, 0])), float(np.nanmedian(xy[:, 1])))
+        x, y = raster.from_crs(_crs(points), centre)(xy[:, 0], xy[:, 1])
+        return np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+
     def check_overlap(self, points: gpd.GeoDataFrame | gpd.GeoSeries) -> None:
         """Raise an InputError where no point lies in the raster."""
-        raster = open_raster(self.path, band=self.band)
+        raster = self._opened()
         xy = _coordinates(points)
-        xy = xy[np.isfinite(xy).all(axis=1)]
-        centre = (float(np.median(xy[:, 0])), float(np.median(xy[:, 1])))
-        x, y = raster.from_crs(_crs(points), centre)(xy[:, 0], xy[:, 1])
+        x, y = self._own_coordinates(raster, points, xy[np.isfinite(xy).all(axis=1)])
         left, bottom, right, top = raster.bounds
         if ((x >= left) & (x <= right) & (y >= bottom) & (y <= top)).any():
             return

@@ -236,6 +236,8 @@ def _at_sites(
         lost = found & ~present
         if isinstance(covariate, RasterCovariate) and not found.any():
             covariate.check_overlap(sites)
+        if isinstance(covariate, RasterCovariate):
+            findings += covariate.findings(sites)
         if lost.any() and not present.any():
             raise InputError(
                 f"Covariate {covariate.label!r}: no site has a value that {transform} accepts "

@@ -160,7 +160,9 @@ def _read_population(study: Study, region: Region) -> Population | None:
 def _covariate(settings: CovariateSettings) -> Covariate:
     name, transform, scale = settings.name, settings.transform, settings.scale
     if settings.raster is not None:
-        return RasterCovariate(settings.raster, name=name, transform=transform, scale=scale)
+        return RasterCovariate(
+            settings.raster, name=name, transform=transform, scale=scale, band=settings.band
+        )
     if settings.distance_to is not None:
         return DistanceCovariate(settings.distance_to, name=name, transform=transform, scale=scale)
     if settings.column is not None:

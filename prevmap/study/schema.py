@@ -241,7 +241,12 @@ def _covariates(tables: list[Mapping[str, Any]], here: Place) -> tuple[Covariate
         if len(sources) != 1:
             given = " and ".join(sources) if sources else "none of them"
             raise InputError(f"{place} accepted: one of raster, distance_to, column, factor; found {given}")
-        misplaced = {"raster": ["at"], "distance_to": ["at"], "column": [], "factor": ["scale", "transform"]}
+        misplaced = {
+            "raster": ["at"],
+            "distance_to": ["at", "band"],
+            "column": ["band"],
+            "factor": ["scale", "transform", "band"],
+        }
         for key in misplaced[sources[0]]:
             if key in table:
                 raise InputError(

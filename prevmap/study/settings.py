@@ -46,6 +46,7 @@ class CovariateSettings:
 
     name: Annotated[str | None, checks.text] = None
     raster: Annotated[Path | None, checks.existing_file] = None
+    band: Annotated[int | None, checks.whole(least=1)] = None
     distance_to: Annotated[Path | None, checks.existing_file] = None
     column: Annotated[str | None, checks.text] = None
     factor: Annotated[str | None, checks.text] = None
