@@ -8,9 +8,11 @@ import numpy as np
 import pandas as pd
 import pytest
 import statsmodels.api as sm
+from scipy.interpolate import CubicSpline
 from scipy.special import expit
 
 import prevmap
+from prevmap.engine.laplace import Theta
 
 DATA = Path(__file__).parent / "data"
 METRES = "+proj=laea +lat_0=0 +lon_0=0 +datum=WGS84 +units=m"
@@ -197,6 +199,81 @@ def test_evidence_integrates_the_prior():
     assert flat.log_evidence == pytest.approx(brute, abs=0.1)  # a Gaussian instead
 
 
+def test_three_free_hyperparameters_are_integrated_as_a_dense_grid_does():
+    """A small survey that leaves range, sd and nugget wide open, where an integration that stops early shows."""
+    rng = np.random.default_rng(3)
+    xy = rng.uniform(0, 100, (25, 2))
+    positive = rng.binomial(30, expit(-2.0 + np.sin(xy[:, 0] / 8.0) + 0.4 * rng.normal(size=25)))
+    survey = survey_of(xy, np.full(25, 30), positive)
+    below, above_sd, above_nugget = 10.0, 2.0, 1.0
+    priors = prevmap.Priors(range_km=prevmap.Below(below), sd=prevmap.Above(above_sd))
+    fit = prevmap.PrevalenceModel([], priors=priors).fit(survey, engine="exact")
+    rates = -np.log(0.05) * np.array([below, 1 / above_sd, 1 / above_nugget])
+    axes = np.linspace(1.0, 9.0, 15), np.linspace(-5.0, 2.0, 12), np.linspace(-5.0, 1.5, 11)
+    height = np.empty([len(a) for a in axes])
+    start = None
+    for i, r in enumerate(axes[0]):
+        for j, s in enumerate(axes[1]):
+            for k, g in enumerate(axes[2]):
+                state = fit.core.laplace(Theta(r, s, g), start)
+                start = state.mode
+                log_prior = np.log(rates[0]) - r - rates[0] * np.exp(-r)
+                log_prior += (
+                    np.log(rates[1]) + s - rates[1] * np.exp(s) + np.log(rates[2]) + g - rates[2] * np.exp(g)
+                )
+                height[i, j, k] = state.log_evidence + log_prior
+    weight = np.exp(height - height.max())
+    volume = np.prod([a[1] - a[0] for a in axes])
+    assert fit.log_evidence == pytest.approx(
+        height.max() + np.log(weight.sum() * volume), abs=0.06
+    )  # tails, 1.5 sd
+    weight /= weight.sum()
+    for at, name in enumerate(("range_km", "sd", "nugget_sd")):
+        other = tuple(b for b in range(3) if b != at)
+        fine = np.linspace(axes[at][0], axes[at][-1], 2_000)
+        density = np.exp(CubicSpline(axes[at], np.log(weight.sum(axis=other)))(fine))
+        cumulative = np.cumsum(density) / density.sum()
+        row = np.log(fit.hyperparameters.loc[name])
+        for column, q, error in (("lower95", 0.025, 0.02), ("median", 0.5, 0.06), ("upper95", 0.975, 0.025)):
+            # Probability below the printed limit; the grid itself errs by about 0.01.
+            assert np.interp(row[column], fine, cumulative) == pytest.approx(q, abs=error), (name, column)
+
+
+def test_a_survey_without_positives_is_the_same_on_the_mesh_and_without_one():
+    """Long ranges stay open here: the border of the mesh must be farther than any range that is tried."""
+    rng = np.random.default_rng(9)
+    survey = survey_of(rng.uniform(0, 40, (25, 2)), np.full(25, 30), np.zeros(25, dtype=int))
+    mesh = prevmap.PrevalenceModel([], mesh=prevmap.MeshSpec(edge_km=4.0)).fit(survey)
+    dense = prevmap.PrevalenceModel([]).fit(survey, engine="exact")
+    # Ranges beyond 20 diagonals, 1 % of the prior, are tried by the dense engine only.
+    assert mesh.log_evidence == pytest.approx(dense.log_evidence, abs=0.06)
+    a, b = mesh.coefficients.loc["intercept"], dense.coefficients.loc["intercept"]
+    assert a["sd"] == pytest.approx(b["sd"], rel=0.05)
+    assert a["upper95"] == pytest.approx(b["upper95"], abs=0.2 * b["sd"])
+
+
+def test_coefficient_spread_is_that_of_the_mixture():
+    xy, examined, positive, x = simulated(n=30)
+    fit = prevmap.PrevalenceModel([prevmap.ColumnCovariate("x")]).fit(
+        survey_of(xy, examined, positive, x=x), engine="exact"
+    )
+    parts = [fit.core.coefficients(state) for state in fit.posterior.states]
+    weight = fit.posterior.weights
+    means, variances = np.array([m for m, _ in parts]), np.array([np.diag(c) for _, c in parts])
+    draws_of = np.random.default_rng(2)
+    k = draws_of.choice(weight.size, 200_000, p=weight)
+    draws = means[k] + np.sqrt(variances[k]) * draws_of.standard_normal((k.size, 2))
+    np.testing.assert_allclose(
+        fit.coefficients["sd"], draws.std(axis=0), rtol=0.01
+    )  # 4 errors of a sd: 0.7 %
+    assert np.all(
+        fit.coefficients["sd"] > 1.0001 * np.sqrt(weight @ variances)
+    )  # hyperparameters move the mean
+    for name, q in (("lower95", 0.025), ("upper95", 0.975)):
+        below = (draws <= fit.coefficients[name].to_numpy()).mean(axis=0)
+        np.testing.assert_allclose(below, q, atol=4 * np.sqrt(q * (1 - q) / k.size))
+
+
 def test_a_known_truth_is_recovered():
     xy, examined, positive, x = simulated(seed=11, n=120)
     fit = prevmap.PrevalenceModel([prevmap.ColumnCovariate("x", scale=False)]).fit(
@@ -231,6 +308,11 @@ def test_test_accuracy_moves_prevalence_towards_the_truth():
     assert ratio == pytest.approx(
         1 / 0.6, rel=0.1
     )  # Rogan & Gladen (1978): apparent over sensitivity, at Sp = 1
+    assert not insensitive.warnings
+    doubtful = prevmap.PrevalenceModel(
+        [], tests={"smear": prevmap.DiagnosticAccuracy(0.9, 0.94)}, priors=prevmap.Priors(range_km=30.0)
+    ).fit(survey, integrate=False)
+    assert any("positives could be false" in w for w in doubtful.warnings)
     unknown = prevmap.PrevalenceModel([], tests={"other": prevmap.DiagnosticAccuracy(0.6, 1.0)})
     with pytest.raises(prevmap.InputError, match="'other', which no row of the survey used; found: 'smear'"):
         unknown.fit(survey)

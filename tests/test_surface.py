@@ -94,7 +94,9 @@ def test_the_nugget_setting_changes_what_is_mapped(fitted):
 def test_far_places_are_flagged_and_those_off_the_mesh_refused(tmp_path):
     region = square_region(tmp_path, size_km=60.0)
     model = prevmap.PrevalenceModel(
-        [], mesh=prevmap.MeshSpec(edge_km=4.0), priors=prevmap.Priors(range_km=12.0, sd=1.0, nugget_sd=0.3)
+        [],
+        mesh=prevmap.MeshSpec(edge_km=4.0, margin_km=30.0),
+        priors=prevmap.Priors(range_km=12.0, sd=1.0, nugget_sd=0.3),
     )
     fit = model.fit(survey(west=30.0), region=region)
     surface = fit.predict(region.grid(cell_km=5))

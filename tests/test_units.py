@@ -218,6 +218,17 @@ def test_more_draws_and_the_same_seed(fit):
         fit.units(grid, draws=10)
 
 
+def test_summaries_are_those_of_the_draws(fit):
+    units = fit.units(fit.region.grid(cell_km=10), draws=900)
+    for name, q in (("lower95", 2.5), ("median", 50), ("upper95", 97.5)):
+        np.testing.assert_allclose(units.frame[name], np.percentile(units.draw_matrix, q, axis=0))
+    np.testing.assert_allclose(units.frame["sd"], units.draw_matrix.std(axis=0, ddof=1))
+    k = (units.draw_matrix > 0.15).sum(axis=0)
+    p = (k + 0.5) / 901
+    np.testing.assert_allclose(units.exceedance(0.15), k / 900)
+    np.testing.assert_allclose(units.exceedance_error(0.15), np.sqrt(p * (1 - p) / 900))
+
+
 def test_a_region_without_units_has_no_unit_table():
     plain = prevmap.PrevalenceModel([], mesh=prevmap.MeshSpec(edge_km=6.0)).fit(survey(), integrate=False)
     with pytest.raises(prevmap.InputError, match="no units"):

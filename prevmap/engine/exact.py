@@ -169,7 +169,7 @@ class DenseModel:
             decrement = float(da @ (K @ (terms.gradient - a)))
             decrement += float(dbeta @ (X.T @ terms.gradient - prior * (beta - self.coefficient_mean)))
             trace.append(decrement)
-            if not np.isfinite(decrement):
+            if not np.isfinite(decrement) or decrement < -1e-6:
                 break
             if decrement < _DECREMENT:
                 return a + da, beta + dbeta, step_number
@@ -247,11 +247,13 @@ class DenseModel:
         X, n = self.design, W.shape[0]
         lu = lu_factor(np.eye(n) + K @ W)
         pivots = np.diag(lu[0])
-        swaps = int(np.sum(lu[1] != np.arange(n)))
         field = lu_solve(lu, W.T, trans=1).T  # W (I + K W)^-1
         field = 0.5 * (field + field.T)
         information = np.diag(1.0 / self.coefficient_variance) + X.T @ field @ X
-        peaked = np.all(pivots != 0) and np.prod(np.sign(pivots)) * (-1.0) ** swaps > 0
+        # K W has the real eigenvalues of a symmetric matrix; only an imperfect test can make one negative.
+        peaked = bool(np.all(pivots != 0))
+        if not self.data.perfect:
+            peaked = peaked and bool(np.min(np.linalg.eigvals(np.eye(n) + K @ W).real) > 0)
         eigenvalues = np.linalg.eigvalsh(information)
         if not peaked or eigenvalues[0] <= 0:
             raise FitError("the posterior is not peaked at the mode: its Hessian is not positive definite")

@@ -304,7 +304,7 @@ class LatentModel:
             step = self._factorize(self._upper(prior + self._assemble @ weights)).solve(gradient)
             decrement = float(gradient @ step)
             trace.append(decrement)
-            if not np.isfinite(decrement):
+            if not np.isfinite(decrement) or decrement < -1e-6:
                 break
             if decrement < _DECREMENT:
                 x = x + step

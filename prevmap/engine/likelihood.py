@@ -158,6 +158,17 @@ def _nugget_mode(eta, n, y, se, sp, lo, hi, nugget_sd, steps):  # type: ignore[n
     f = 0.0
     for i in range(lo, hi):
         f += _row_terms(eta[i], n[i], y[i], se[i], sp[i])[0]
+    if se[lo] < 1.0 or sp[lo] < 1.0:
+        # An imperfect test is flat far from the data, where Newton's method would stay: try the data's own place.
+        share = (y[lo] / n[lo] + sp[lo] - 1.0) / (se[lo] + sp[lo] - 1.0)
+        share = min(max(share, 0.5 / n[lo]), 1.0 - 0.5 / n[lo])
+        other = np.log(share / (1.0 - share)) - eta[lo]
+        g = -0.5 * other * other * inv
+        for i in range(lo, hi):
+            g += _row_terms(eta[i] + other, n[i], y[i], se[i], sp[i])[0]
+        if g > f:
+            z = other
+            f = g
     for _ in range(steps):
         g = -z * inv
         h = inv

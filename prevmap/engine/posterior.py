@@ -2,7 +2,7 @@
 
 The log posterior of ``theta`` = (log range, log sd, log nugget) is the Laplace log-evidence plus the log prior
 density *in theta*. Its mode is found by a quasi-Newton method with the exact gradient. Integration follows
-Rue, Martino & Chopin (2009, JRSS-B 71:319-392, sections 3.1 and 6.5): an even lattice in the eigenbasis of the
+Rue, Martino & Chopin (2009, JRSS-B 71:319-392, section 3.1): an even lattice in the eigenbasis of the
 curvature at the mode, grown outward while the density has not fallen off, so that slow tails get points.
 """
 
@@ -27,9 +27,9 @@ log = logging.getLogger("prevmap")
 _STEP = (
     1.5  # lattice step in posterior standard deviations: trapezoid error about 2 exp(-2 pi^2/step^2) = 3e-4
 )
-_DROP = 2.5  # a lattice point this far below the mode (log scale) gets neighbours only where a slow tail asks
-_TAIL = 0.01  # mass beyond the last point of a line, relative to that at the mode
-_MOST_POINTS = 150
+_DROP = 4.0  # a lattice point this far below the mode (log scale) gets neighbours only where a slow tail asks
+_TAIL = 0.002  # mass beyond the last point of a line, relative to that at the mode
+_MOST_POINTS = 300
 _NEGLIGIBLE = 12.0  # points this far below the mode only disturb an interpolant
 _OFFSET = 0.25  # where a slope is turned into a value, in posterior standard deviations
 _DROPPED_MASS = 3e-3
@@ -473,11 +473,15 @@ def _marginals(
         known.append(z + shift * np.eye(d)[j])
         heights.append(v + shift * g[:, j] - 0.5 * shift**2)  # unit curvature, the scale of z
     fine_step = 0.05 if d == 1 else 0.25
-    axes = [np.arange(z[:, j].min() - _STEP / 2, z[:, j].max() + _STEP, fine_step) for j in range(d)]
+    axes = [np.arange(z[:, j].min() - _STEP, z[:, j].max() + _STEP + 1e-9, fine_step) for j in range(d)]
     fine = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, d)
-    distance, _ = cKDTree(z).query(fine, p=np.inf)
-    fine = fine[distance <= _STEP / 2 + 1e-9]
+    distance, nearest = cKDTree(z).query(fine, p=np.inf)
+    inside = distance <= _STEP + 1e-9
+    fine, distance, nearest = fine[inside], distance[inside], nearest[inside]
     density = RBFInterpolator(np.concatenate(known), np.concatenate(heights), kernel="cubic", degree=2)(fine)
+    # Beyond the outermost points the density goes on, but may only fall.
+    beyond = distance > _STEP / 2 + 1e-9
+    density[beyond] = np.minimum(density[beyond], v[nearest[beyond]])
     weight = np.exp(np.minimum(density, 1.0))
     weight /= weight.sum()
     theta = peak.values + fine @ peak.basis.T

@@ -19,7 +19,7 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 from scipy.interpolate import CubicSpline
-from scipy.special import ndtri
+from scipy.special import expit, ndtri
 
 NUGGET_SETTINGS = ("average", "omit", "draw")
 
@@ -280,7 +280,7 @@ def prevalence_quantile(mixture: Mixture, probability: float) -> NDArray[np.floa
         mixture.mean, mixture.variance, mixture.weight, tables.forward, tables.backward,
         probability, float(ndtri(probability)), 1e-9,
     )  # fmt: skip
-    return 1.0 / (1.0 + np.exp(-logit))
+    return np.asarray(expit(logit))
 
 
 def prevalence_of(table: NDArray[np.float64], eta: NDArray[np.float64]) -> NDArray[np.float64]:

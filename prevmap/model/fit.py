@@ -32,11 +32,11 @@ from prevmap.model import meshing
 from prevmap.model.prior import (
     Resolved,
     coefficient_prior,
-    default_margin_km,
+    default_reach_km,
     prior_sentences,
     resolve_priors,
 )
-from prevmap.model.rows import Rows, pool_rows, row_accuracy
+from prevmap.model.rows import Rows, false_positive_warning, pool_rows, row_accuracy
 from prevmap.model.spec import SMOOTHNESS, PrevalenceModel
 
 if TYPE_CHECKING:
@@ -247,12 +247,12 @@ def fit_model(
     if region is None:
         region = hull_region(survey.frame.geometry)
     resolved = resolve_priors(model.priors, meshing.diagonal_km(region.boundary))
-    margin_km = model.mesh.margin_km or default_margin_km(resolved[0])
-    inside, position_findings = site_findings(survey.frame, region, margin_km)
+    reach_km = model.mesh.margin_km or default_reach_km(resolved[0])
+    inside, position_findings = site_findings(survey.frame, region, reach_km)
     if not np.any(inside):
         raise InputError(
             "no site lies in or near the study area: check the coordinates of the survey and of the region."
-            + exchange_hint(survey.frame, region, margin_km),
+            + exchange_hint(survey.frame, region, reach_km),
             tuple(position_findings),
         )
     near = survey.frame[inside]
@@ -270,7 +270,7 @@ def fit_model(
     tick = _Progress(progress)
     try:
         core, posterior, shape, warnings = _run(
-            model, region, rows, resolved, engine, integrate, margin_km, tick
+            model, region, rows, resolved, engine, integrate, reach_km, tick
         )
     finally:
         tick.close()
@@ -292,7 +292,7 @@ def fit_model(
         _hyperparameters(posterior, resolved),
         float(posterior.log_evidence),
         _all_findings(survey, region, designed, found),
-        tuple(warnings),
+        (*warnings, *false_positive_warning(rows)),
         _sites(rows, row_units[kept], region),
         len(frame), row_units, unplaced_units,
         prior_sentences(model.priors, resolved, len(designed.terms)),
@@ -307,7 +307,7 @@ def _run(
     resolved: tuple[Resolved, Resolved, Resolved],
     engine: str,
     integrate: bool,
-    margin_km: float,
+    reach_km: float,
     tick: Callable[[str], None],
 ) -> tuple[Engine, Posterior, dict[str, Any], list[str]]:
     """Build the engine, infer, and mesh once more where a default turned out too coarse or too narrow."""
@@ -322,30 +322,27 @@ def _run(
             )
         core: Engine = DenseModel(rows.data, rows.xy_km, rows.design, mean, sd, model.nu)
         shortest = spacing / 100.0 if math.isfinite(spacing) else diagonal / 1000.0
-        outer = _outer(rows, resolved, shortest, diagonal)
+        outer = _outer(rows, resolved, shortest, 100.0 * diagonal)
         posterior = infer(core, outer, find_peak(core, outer, tick=tick), integrate=integrate, tick=tick)
         shape = {"nodes": 0, "edge_km": math.nan, "margin_km": math.nan}
         return core, posterior, shape, list(posterior.warnings)
     zone = meshing.inner_zone_km(region.boundary, rows.xy_km)
     edge = model.mesh.edge_km or meshing.default_edge_km(zone, resolved[0].middle, spacing)
+    margin_km = model.mesh.margin_km or meshing.default_margin_km(region.boundary, reach_km)
+    longest = meshing.RANGES_PER_MARGIN * margin_km
     peak: Peak | None = None
     remeshed = False
     while True:
         mesh = meshing.mesh_over(zone, edge, margin_km, model.mesh.max_nodes)
         weights, _ = projector(mesh, rows.xy_km)
         core = LatentModel(rows.data, mesh, weights, rows.design, mean, sd)
-        outer = _outer(rows, resolved, edge / 2.0, diagonal, peak)
+        outer = _outer(rows, resolved, edge / 2.0, longest, peak)
         peak = find_peak(core, outer, tick=tick)
         lower, middle = _range_limits(infer(core, outer, peak, integrate=False))
         finer = _finer_edge(model, zone, lower, middle, edge)
-        wider = (
-            float(f"{1.25 * middle:.3g}")
-            if margin_km < middle and model.mesh.margin_km is None
-            else margin_km
-        )
-        if remeshed or (finer == edge and wider == margin_km):
+        if remeshed or finer == edge:
             break
-        edge, margin_km, remeshed = finer, wider, True
+        edge, remeshed = finer, True
     posterior = infer(core, outer, peak, integrate=integrate, tick=tick)
     lower, middle = _range_limits(posterior)
     warnings = list(posterior.warnings)
@@ -357,7 +354,7 @@ def _run(
     if margin_km < middle * 0.999:
         warnings.append(
             f"the mesh margin of {margin_km:.3g} km is below the fitted range ({middle:.3g} km): uncertainty near "
-            "the border is overstated; a larger margin_km would mend it"
+            "the border is overstated and longer ranges are not tried; a larger margin_km would mend it"
         )
     for warning in warnings:
         log.info(warning)
@@ -390,14 +387,14 @@ def _outer(
     rows: Rows,
     resolved: tuple[Resolved, Resolved, Resolved],
     shortest_km: float,
-    diagonal_km: float,
+    longest_km: float,
     before: Peak | None = None,
 ) -> Outer:
     """Outer problem started at moment estimates, or at the mode found on an earlier mesh."""
     free = np.array([r.free for r in resolved])
     fixed = np.array([r.log_middle for r in resolved])
     lower = np.log([shortest_km, _SD_BOUNDS[0], _NUGGET_BOUNDS[0]])
-    upper = np.log([100.0 * max(diagonal_km, shortest_km), _SD_BOUNDS[1], _NUGGET_BOUNDS[1]])
+    upper = np.log([max(longest_km, 10.0 * shortest_km), _SD_BOUNDS[1], _NUGGET_BOUNDS[1]])
     if before is not None:
         theta = before.state.theta
         start = np.array([theta.log_range, theta.log_sd, theta.log_nugget])
@@ -406,7 +403,7 @@ def _outer(
         logit = np.log((y + 0.5) / (n - y + 0.5))
         noise = np.mean(1.0 / (y + 0.5) + 1.0 / (n - y + 0.5))
         spread = float(np.clip(np.var(logit) - noise, 0.1, 6.0))
-        start = np.log([min(resolved[0].middle, max(diagonal_km / 4.0, shortest_km)), 1.0, 1.0])
+        start = np.log([min(resolved[0].middle, longest_km / 4.0), 1.0, 1.0])
         start[1:] = 0.5 * np.log([0.75 * spread, 0.25 * spread])
     start = np.where(free, np.clip(start, lower + 1e-3, upper - 1e-3), fixed)
     return Outer(start, free, tuple(r.log_density for r in resolved), lower, upper)  # type: ignore[arg-type]

@@ -11,10 +11,14 @@ from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
 from prevmap.engine.mesh import Mesh, check_node_cap, equilateral_lattice, grade_mesh
+from prevmap.errors import InputError
 
 DEFAULT_NODES = 4_000  # a default edge asks for no more nodes than this in the region
 REFINED_NODES = 6_000  # and no more than this after a look at the fitted range
 EDGES_PER_RANGE = 10.0
+DEFAULT_MARGIN = 10.0  # diagonals of the study area: rings grow, so that distance costs few nodes
+RANGES_PER_MARGIN = 2.0  # up to here the border raises the variance in the region by less than 3 %
+LARGEST_MARGIN = 2_000.0  # diagonals
 
 
 def diagonal_km(boundary: Any) -> float:
@@ -45,14 +49,26 @@ def default_edge_km(zone: Any, range_km: float, spacing_km: float, nodes: int = 
     return float(f"{max(wanted, affordable):.3g}")
 
 
+def default_margin_km(boundary: Any, reach_km: float) -> float:
+    """Margin for every range that the data may leave open, and for the range to be expected."""
+    diagonal = diagonal_km(boundary)
+    return float(f"{min(max(DEFAULT_MARGIN * diagonal, 1.2 * reach_km), LARGEST_MARGIN * diagonal):.3g}")
+
+
 def mesh_over(zone: Any, edge_km: float, margin_km: float, max_nodes: int) -> Mesh:
     """Mesh of the zone grown by one edge, with a margin beyond.
 
     Raises
     ------
     InputError
-        Above ``max_nodes``, before any work, with the edge that would fit.
+        Above ``max_nodes``, before any work, with the edge that would fit; or for a margin out of all proportion.
     """
+    west, south, east, north = zone.bounds
+    most = LARGEST_MARGIN * max(math.hypot(east - west, north - south), edge_km)
+    if margin_km > most * 1.01:
+        raise InputError(
+            f"margin_km = {margin_km:g}: expected at most {most:.3g} km for a study area of this size"
+        )
     check_node_cap(
         zone.area, edge_km, margin_km, max_nodes, zone_perimeter_km=shapely.convex_hull(zone).length
     )

@@ -117,6 +117,6 @@ def coefficient_prior(priors: Priors, terms: int) -> tuple[np.ndarray, np.ndarra
     return mean, sd
 
 
-def default_margin_km(of_range: Resolved) -> float:
-    """Margin of the mesh before a look at the data: the range to be expected, a little more where it is fixed."""
-    return float(f"{of_range.middle * (1.0 if of_range.free else 1.2):.3g}")
+def default_reach_km(of_range: Resolved) -> float:
+    """How far outside the study area a site still tells something: the range to be expected."""
+    return float(f"{of_range.middle:.3g}")

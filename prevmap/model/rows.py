@@ -14,6 +14,7 @@ from prevmap.errors import InputError
 from prevmap.inputs.survey import Survey
 from prevmap.model.spec import DiagnosticAccuracy
 
+_MANY_FALSE = 0.3  # share of the positives that may be false before the limits are called into question
 _MILLIMETRE_KM = 6  # decimals kept of a position in km: the unit of the coordinates must not matter
 
 
@@ -75,6 +76,19 @@ def row_accuracy(
         at = np.array([str(n) == name for n in names])
         out[at] = accuracy.sensitivity, accuracy.specificity
     return out
+
+
+def false_positive_warning(rows: Rows) -> list[str]:
+    """Warn where false positives could make up much of what was found positive."""
+    imperfect = rows.data.specificity < 1.0
+    positive = float(rows.data.positive[imperfect].sum())
+    false = float((rows.data.examined * (1.0 - rows.data.specificity))[imperfect].sum())
+    if not imperfect.any() or false < _MANY_FALSE * positive:
+        return []
+    return [
+        f"with the stated specificity about {false:,.0f} of the {positive:,.0f} positives could be false: lower limits "
+        "of prevalence and probabilities of being above a low threshold come out too high"
+    ]
 
 
 def pool_rows(

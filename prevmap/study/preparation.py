@@ -22,7 +22,7 @@ from prevmap.inputs.population import Population, read_population
 from prevmap.inputs.region import Region, hull_region, read_region
 from prevmap.inputs.survey import Survey, SurveyNotes, read_survey
 from prevmap.model import meshing
-from prevmap.model.prior import default_margin_km, resolve_priors
+from prevmap.model.prior import default_reach_km, resolve_priors
 from prevmap.model.rows import row_accuracy
 from prevmap.model.spec import Above, Below, DiagnosticAccuracy, MeshSpec, PrevalenceModel, Priors
 from prevmap.study.checks import TailPrior
@@ -248,11 +248,11 @@ def prepare(study: Study, inputs: StudyInputs, model: PrevalenceModel) -> Prepar
             raise InputError("no row has a position: no model can be fitted")
     with naming(study, "[prior]"):
         of_range = resolve_priors(model.priors, meshing.diagonal_km(region.boundary))[0]
-    margin_km = model.mesh.margin_km or default_margin_km(of_range)
-    near, findings = site_findings(survey.frame, region, margin_km)
+    reach_km = model.mesh.margin_km or default_reach_km(of_range)
+    near, findings = site_findings(survey.frame, region, reach_km)
     with naming(study, "[survey]"):
         if not near.any():
-            hint = exchange_hint(survey.frame, region, margin_km)
+            hint = exchange_hint(survey.frame, region, reach_km)
             raise InputError(f"no site lies in or near the study area: check the coordinates of both.{hint}")
     findings = [*findings, *assign_units(survey, region, near)[1], *assign_unplaced(survey, region)[1]]
     frame = survey.frame[near]
@@ -265,4 +265,5 @@ def prepare(study: Study, inputs: StudyInputs, model: PrevalenceModel) -> Prepar
     frame = frame[designed.kept]
     with naming(study, "[tests]"):
         row_accuracy(survey, np.isin(survey.frame.index, frame.index), model.tests)
+    margin_km = model.mesh.margin_km or meshing.default_margin_km(region.boundary, reach_km)
     return Preparation(frame, designed, tuple(findings), of_range.middle, margin_km)
