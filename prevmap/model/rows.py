@@ -86,8 +86,8 @@ def false_positive_warning(rows: Rows) -> list[str]:
     if not imperfect.any() or false < _MANY_FALSE * positive:
         return []
     return [
-        f"with the stated specificity about {false:,.0f} of the {positive:,.0f} positives could be false: lower limits "
-        "of prevalence and probabilities of being above a low threshold come out too high"
+        f"with the stated specificity about {false:,.0f} of the {positive:,.0f} positives could be false: lower "
+        "limits of prevalence and probabilities of being above a low threshold come out too high"
     ]
 
 
