@@ -153,6 +153,22 @@ def test_a_mode_at_the_end_of_the_search_is_named():
     assert any("range_km came to rest at the end" in w for w in peak.warnings)
 
 
+def test_a_bound_that_holds_one_coordinate_does_not_stop_the_others():
+    precision = np.array([[1.0, 0.9, 0.0], [0.9, 1.0, 0.3], [0.0, 0.3, 2.0]])
+    mean = np.array([4.0, -1.0, 0.5])
+    problem = Outer(
+        np.array([0.0, 2.0, -1.0]),
+        np.ones(3, dtype=bool),
+        (None, None, None),
+        np.full(3, -20.0),
+        np.array([1.0, 20.0, 20.0]),
+    )
+    peak = find_peak(Shape(gaussian(mean, precision)), problem)
+    given = mean[1:] - np.linalg.solve(precision[1:, 1:], precision[1:, 0] * (1.0 - mean[0]))
+    assert peak.values[0] == 1.0
+    np.testing.assert_allclose(peak.values[1:], given, atol=0.03)
+
+
 def test_no_mode_is_an_error():
     def function(v):
         return float(v[0]), np.array([-1.0, 0.0, 0.0])  # a gradient that points downhill

@@ -357,10 +357,9 @@ class _Search:
         value, gradient, _ = self.evaluate(x, "mode")
         inverse = _FIRST_SCALE * np.eye(x.size)
         for _ in range(_MOST_STEPS):
-            ascent = inverse @ gradient
             # A coordinate held by its bound does not keep the search going.
             held = ((x <= lower) & (gradient < 0)) | ((x >= upper) & (gradient > 0))
-            ascent[held] = 0.0
+            ascent = np.where(held, 0.0, inverse @ np.where(held, 0.0, gradient))
             remaining = float(gradient[~held] @ ascent[~held])
             if remaining < _REMAINING and float(np.max(np.abs(gradient[~held]), initial=0.0)) < _GRADIENT:
                 return self._checked(x, lower, upper)
