@@ -43,6 +43,7 @@ _ROOM_OF = {
     "map_surface": "show.maps",
     "map_units": "show.maps",
     "map_sites": "show.maps",
+    "map_panel": "show.maps",
     "Study": "study",
     "StudyResult": "study",
     "read_study": "study",

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from scipy.linalg import cholesky, lu_factor, lu_solve
 from scipy.spatial.distance import cdist
 
-from prevmap.engine.laplace import Theta, clamp_blocks
+from prevmap.engine.laplace import Theta, clamp_blocks, unconverged
 from prevmap.engine.likelihood import Observations, evaluate, higher_terms
 from prevmap.engine.matern import correlation, correlation_range_derivative
 from prevmap.errors import FitError
@@ -181,11 +181,7 @@ class DenseModel:
                 length *= 0.5
             a, beta = a + length * da, beta + length * dbeta
             value = trial
-        shown = ", ".join(f"{d:.3g}" for d in trace[-6:])
-        raise FitError(
-            f"Newton's method did not converge in {len(trace)} steps at range {theta.range_km:.4g} km, sd "
-            f"{theta.sd:.4g}, nugget sd {theta.nugget_sd:.4g}; last decrements {shown}"
-        )
+        raise unconverged(theta, trace)
 
     def laplace(self, theta: Theta, start: NDArray[np.float64] | None = None) -> DenseState:
         """Mode, log-evidence and exact gradient at ``theta``.

@@ -17,9 +17,9 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.sparse import csc_matrix, csr_matrix
+from scipy.sparse import csc_matrix, csr_matrix, hstack
 
-from prevmap.engine.likelihood import Observations, evaluate, higher_terms
+from prevmap.engine.likelihood import Observations, Terms, evaluate, higher_terms
 from prevmap.engine.matern import SpdeMatrices, precision_range_derivative, precision_upper, spde_matrices
 from prevmap.engine.mesh import Mesh, locate
 from prevmap.engine.project import MeshRows, row_moments, row_values
@@ -77,6 +77,16 @@ def clamp_blocks(curvature: NDArray[np.float64], data: Observations) -> NDArray[
         values, vectors = np.linalg.eigh(out[block[s] : block[s + 1]].reshape(k, k))
         out[block[s] : block[s + 1]] = ((vectors * np.maximum(values, 0.0)) @ vectors.T).ravel()
     return out
+
+
+def unconverged(theta: Theta, trace: list[float]) -> FitError:
+    """Error for a Newton iteration that did not converge, with its last decrements."""
+    shown = ", ".join(f"{d:.3g}" for d in trace[-6:])
+    return FitError(
+        f"Newton's method did not converge in {len(trace)} steps at range {theta.range_km:.4g} km, sd "
+        f"{theta.sd:.4g}, nugget sd {theta.nugget_sd:.4g}; last decrements {shown}. Look for sites with "
+        "impossible counts, or give tighter priors"
+    )
 
 
 def _key(rows: NDArray[np.int64], columns: NDArray[np.int64], order: int) -> NDArray[np.int64]:
@@ -149,26 +159,12 @@ class LatentModel:
         self.order = self.nodes + self.terms
         self.prior_mean = np.concatenate([np.zeros(self.nodes), coefficient_mean])
         self.coefficient_precision = 1.0 / np.asarray(coefficient_sd, dtype=float) ** 2
-        self.B = self._join(projector, design)
+        self.B = csr_matrix(hstack([projector, csr_matrix(design)], format="csr"))
         self._lay_out_pattern()
-        self._stiff = csc_matrix(self.spde.stiffness)
-        self._k_upper, self._k_mass, self._k_stiff, self._k_diagonal = self._operator_pattern()
+        self._k_upper, self._k_mass, self._k_diagonal = self._operator_pattern()
         # The two patterns are analysed once, on values that are sure to be positive definite.
         self._factorize_operator = Factorizer(self._operator(1.0))
         self._factorize = Factorizer(self._upper(self.precision(Theta(0.0, 0.0, -np.inf))))
-
-    @staticmethod
-    def _join(projector: csr_matrix, design: NDArray[np.float64]) -> csr_matrix:
-        projector = csr_matrix(projector)
-        n, m = projector.shape
-        p = design.shape[1]
-        rows = np.repeat(np.arange(n), np.diff(projector.indptr))
-        all_rows = np.concatenate([rows, np.repeat(np.arange(n), p)])
-        all_columns = np.concatenate([projector.indices, np.tile(np.arange(m, m + p), n)])
-        values = np.concatenate([projector.data, np.ascontiguousarray(design).ravel()])
-        order = np.lexsort((all_columns, all_rows))
-        indptr = np.concatenate([[0], np.cumsum(np.bincount(all_rows, minlength=n))])
-        return csr_matrix((values[order], all_columns[order], indptr), shape=(n, m + p))
 
     def _lay_out_pattern(self) -> None:
         """Pattern of H and the maps from curvature blocks and precision entries into it."""
@@ -222,8 +218,9 @@ class LatentModel:
         s = site[first]
         return block[s] + (first - start[s]) * size[s] + (second - start[s])
 
-    def _operator_pattern(self) -> tuple[csc_matrix, NDArray, NDArray, NDArray]:
-        stiff = self._stiff
+    def _operator_pattern(self) -> tuple[csc_matrix, NDArray, NDArray]:
+        """Upper triangle of G, C on its pattern, and where the diagonal sits."""
+        stiff = csc_matrix(self.spde.stiffness)
         rows, columns = stiff.indices, np.repeat(np.arange(self.nodes), np.diff(stiff.indptr))
         upper = rows <= columns
         order = np.lexsort((rows[upper], columns[upper]))
@@ -233,11 +230,11 @@ class LatentModel:
         diagonal = np.flatnonzero(rows == columns)
         mass = np.zeros(values.size)
         mass[diagonal] = self.spde.lumped
-        return pattern, mass, values.copy(), diagonal
+        return pattern, mass, diagonal
 
-    def _operator(self, kappa: float) -> csc_matrix:
+    def _operator(self, kappa2: float) -> csc_matrix:
         """Upper triangle of K = kappa^2 C + G."""
-        data = kappa**2 * self._k_mass + self._k_stiff
+        data = kappa2 * self._k_mass + self._k_upper.data
         return csc_matrix((data, self._k_upper.indices, self._k_upper.indptr), shape=self._k_upper.shape)
 
     def _upper(self, data: NDArray[np.float64]) -> csc_matrix:
@@ -262,7 +259,7 @@ class LatentModel:
     def _log_prior_determinant(self, theta: Theta) -> tuple[float, float]:
         """log|P| and its derivative in log range."""
         kappa2 = 8.0 / theta.range_km**2
-        k = self._factorize_operator(self._operator(np.sqrt(kappa2)))
+        k = self._factorize_operator(self._operator(kappa2))
         inverse_diagonal = k.inverse_on_pattern()[self._k_diagonal]
         log_tau2 = -np.log(4.0 * np.pi * kappa2 * theta.sd**2)
         value = self.nodes * log_tau2 + 2.0 * k.log_determinant - float(np.sum(np.log(self.spde.lumped)))
@@ -289,16 +286,14 @@ class LatentModel:
         prior = self.precision(theta)
         x = self.prior_mean.copy() if start is None else start.copy()
 
-        def objective(v: NDArray[np.float64]) -> float:
+        def objective(v: NDArray[np.float64]) -> tuple[float, Terms]:
             d = v - self.prior_mean
-            return evaluate(self.data, self.B @ v, theta.nugget_sd).value - 0.5 * float(
-                d @ self.multiply(prior, d)
-            )
+            terms = evaluate(self.data, self.B @ v, theta.nugget_sd)
+            return terms.value - 0.5 * float(d @ self.multiply(prior, d)), terms
 
         trace: list[float] = []
-        value = objective(x)
+        value, terms = objective(x)
         for step_number in range(1, _MAX_STEPS + 1):
-            terms = evaluate(self.data, self.B @ x, theta.nugget_sd)
             gradient = self.B.T @ terms.gradient - self.multiply(prior, x - self.prior_mean)
             weights = clamp_blocks(terms.curvature, self.data)
             step = self._factorize(self._upper(prior + self._assemble @ weights)).solve(gradient)
@@ -311,18 +306,13 @@ class LatentModel:
                 return x, step_number, self.B @ x
             length = 1.0
             for _ in range(30):
-                trial = objective(x + length * step)
+                trial, trial_terms = objective(x + length * step)
                 if trial >= value + 1e-4 * length * decrement - 1e-11 * abs(value):
                     break
                 length *= 0.5
             x = x + length * step
-            value = trial
-        shown = ", ".join(f"{d:.3g}" for d in trace[-6:])
-        raise FitError(
-            f"Newton's method did not converge in {len(trace)} steps at range {theta.range_km:.4g} km, sd "
-            f"{theta.sd:.4g}, nugget sd {theta.nugget_sd:.4g}; last decrements {shown}. Look for sites with "
-            "impossible counts, or give tighter priors"
-        )
+            value, terms = trial, trial_terms
+        raise unconverged(theta, trace)
 
     def laplace(self, theta: Theta, start: NDArray[np.float64] | None = None) -> State:
         """Mode, log-evidence and exact gradient at ``theta``.

@@ -164,10 +164,9 @@ class Factorizer:
         Upper triangle with sorted indices; explicit zeros belong to the pattern.
     """
 
-    __slots__ = ("_order", "_positions", "_shape", "_solver")
+    __slots__ = ("_order", "_positions", "_solver")
 
     def __init__(self, upper: csc_matrix) -> None:
-        self._shape = upper.shape
         self._solver = qdldl.Solver(upper, upper=True)
         self._order: NDArray[np.int64] | None = None
         self._positions: NDArray[np.int64] | None = None
